@@ -1,0 +1,40 @@
+"""The one page of letters, axes, units and signs (DEVELOPERS.md explains each).
+
+x is the range (the way the wave is sent), y is transverse; arrays are ``(x, y)`` with y contiguous.
+The medium is ``v(x, y) = V/E = 1 - n**2``. The time factor is exp(-i omega t): outgoing waves are exp(+ikr).
+Paraxial wave: i du/dx = -(1/2k) d2u/dy2 + (k/2) v u, with psi = u exp(ikx).
+Paraxial rays: dy/dx = p, dp/dx = -v_y/2, dS/dx = p**2/2 - v/2; the phase of a ray is kS - (pi/2) maslov.
+"""
+
+import math
+
+X, Y, Y_FINE = "x", "y", "y_fine"
+WAVELENGTH, RAY, REALISATION, CAUSTIC, BRANCH = "wavelength", "ray", "realisation", "caustic", "branch"
+
+CARRIER = "exp(ikx) removed"
+PARAXIAL = "paraxial"
+SIDES = ("periodic", "absorbing")
+
+MEAN_FIRST_CAUSTIC = 4.1796234
+"""Mean distance to the first caustic of a plane wave in units of z_c = D**(-1/3), white-noise limit:
+(2/3) 2**(1/3) pi**2 [Ai(0)**2 + Bi(0)**2] (law: Kulkarny & White, Phys. Fluids 25 (1982) 1770)."""
+
+
+def wavenumber(wavelength):
+    """Return k = 2 pi / wavelength."""
+    return 2.0 * math.pi / wavelength
+
+
+def wave_parameter(wavenumber, angle_diffusion, curvature_noise):
+    """Return kappa = 3 k Dtheta D**(-2/3), the one parameter (beside x/z_c) by which rays fail.
+
+    Parameters
+    ----------
+    wavenumber : float or array
+        k = 2 pi / wavelength, 1/length.
+    angle_diffusion : float
+        Dtheta = -A''(0) of the line-integrated index correlation, 1/length.
+    curvature_noise : float
+        D = A''''(0), 1/length**3.
+    """
+    return 3.0 * wavenumber * angle_diffusion * curvature_noise ** (-2.0 / 3.0)

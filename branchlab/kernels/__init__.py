@@ -1,0 +1,1 @@
+"""Compiled loops and transforms: arrays in, arrays out; no xarray, no files, no raise."""

@@ -1,0 +1,186 @@
+"""The written layout of every result: names, dimensions, units, and one check that lists all faults."""
+
+import numpy as np
+import xarray as xr
+
+from branchlab.conventions import (
+    BRANCH,
+    CAUSTIC,
+    RAY,
+    REALISATION,
+    WAVELENGTH,
+    Y_FINE,
+    X,
+    Y,
+)
+from branchlab.errors import InputError, check_choice
+
+# unit of a variable: "1", or "L": the length unit of the setup (with a power, as in "L-1")
+NAMES = {
+    X: ("L", "range"),
+    Y: ("L", "transverse position"),
+    Y_FINE: ("L", "transverse position, fine grid"),
+    WAVELENGTH: ("L", "wavelength where v = 0"),
+    RAY: ("1", "number of the ray"),
+    REALISATION: ("1", "seed of the realisation"),
+    CAUSTIC: ("1", "number of the caustic point"),
+    BRANCH: ("1", "number of the branch"),
+    "v": ("1", "v = V/E = 1 - n**2"),
+    "intensity": ("1", "intensity, mean over a cell"),
+    "psi": ("1", "envelope of the wave"),
+    "flux": ("L", "flux through the screen"),
+    "lost_flux": ("L", "flux that left the window"),
+    "unresolved_flux": ("L", "flux in tubes too coarse to be resolved"),
+    "numerical_error": ("1", "numerical error, as misplaced flux"),
+    "field_error": ("1", "relative numerical error of the field"),
+    "spectral_tail": ("1", "share of the spectrum near the end of the grid's"),
+    "flux_excess": ("1", "flux of the sum over that of its rays, minus 1"),
+    "trusted": ("1", "the sum's own alarm is silent"),
+    "rays_per_point": ("1", "mean number of rays through a point"),
+    "position": ("L", "transverse position"),
+    "momentum": ("1", "transverse momentum (sine of the angle)"),
+    "action": ("L", "action, carrier removed"),
+    "maslov": ("1", "Maslov index"),
+    "status": ("1", "status of the ray"),
+    "dydy": ("1", "stability matrix, dy/dy0"),
+    "dydp": ("L", "stability matrix, dy/dp0"),
+    "dpdy": ("L-1", "stability matrix, dp/dy0"),
+    "dpdp": ("1", "stability matrix, dp/dp0"),
+    "dyds": ("1", "stretch of the front, dy/ds"),
+    "dpds": ("1", "turn of the front, dp/ds"),
+    "s": ("1", "front parameter"),
+    "part": ("1", "number of the coherent part"),
+    "ray_flux": ("L", "flux that the ray stands for"),
+    "first_caustic": ("L", "range of the first caustic on the ray"),
+    "order": ("1", "how many caustics the ray has passed, this one included"),
+    "intensity_ray": ("1", "ray density, smoothed to the resolution"),
+    "intensity_wave": ("1", "wave intensity, smoothed to the resolution"),
+    "mismatch": ("1", "wave intensity minus ray density"),
+    "misplaced_flux": ("1", "misplaced flux"),
+    "misplaced_flux_band": ("1", "misplaced flux of the band average"),
+    "displacement": ("L", "displacement (Wasserstein-1 distance)"),
+    "displacement_band": ("L", "displacement of the band average"),
+    "correlation": ("1", "correlation of rays and wave"),
+    "correlation_band": ("1", "correlation of rays and band average"),
+    "resolved": ("1", "mismatch is above the numerical error"),
+    "interference": ("1", "semiclassical sum minus ray density"),
+    "removable": ("1", "interference that the band removes"),
+    "caustic_part": ("1", "interference that stays under the band, at caustics"),
+    "diffraction": ("1", "wave minus semiclassical sum"),
+    "share_interference": ("1", "misplaced flux of the interference"),
+    "share_removable": ("1", "misplaced flux of the removable interference"),
+    "share_caustic": ("1", "misplaced flux of the caustic part"),
+    "share_diffraction": ("1", "misplaced flux of the diffraction"),
+    "reach": ("L", "validity range"),
+    "reach_low": ("L", "validity range, lower end of the interval"),
+    "reach_high": ("L", "validity range, upper end of the interval"),
+    "crossed": ("1", "the threshold is crossed inside the window"),
+    "reach_band": ("L", "validity range of the band average"),
+    "reach_band_low": ("L", "validity range of the band average, lower end of the interval"),
+    "reach_band_high": ("L", "validity range of the band average, upper end of the interval"),
+    "crossed_band": ("1", "the band average crosses the threshold inside the window"),
+}
+
+# kind -> variables it must have, with their dimensions (a leading realisation dimension is always allowed)
+KINDS = {
+    "trace": {name: (X, RAY) for name in ("position", "momentum", "action", "maslov", "status")},
+    "density": {
+        "intensity": (X, Y),
+        **{name: (X,) for name in ("flux", "lost_flux", "unresolved_flux", "numerical_error")},
+    },
+    "caustics": {"first_caustic": (RAY,), "order": (CAUSTIC,)},
+    "section": {"position": (RAY,), "momentum": (RAY,), "ray_flux": (RAY,)},
+    "wave": {
+        "intensity": (WAVELENGTH, X, Y),
+        **{name: (WAVELENGTH, X) for name in ("flux", "numerical_error", "spectral_tail")},
+    },
+    "semiclassical": {
+        "intensity": (WAVELENGTH, X, Y),
+        **{name: (WAVELENGTH, X) for name in ("flux_excess", "trusted")},
+    },
+    "comparison": {
+        **{name: (WAVELENGTH, X, Y) for name in ("intensity_wave", "mismatch")},
+        **{
+            name: (WAVELENGTH, X)
+            for name in ("misplaced_flux", "displacement", "correlation", "numerical_error", "resolved")
+        },
+    },
+    "validity": {name: (WAVELENGTH,) for name in ("reach", "reach_low", "reach_high", "crossed")},
+}
+ATTRIBUTES = ("kind", "model", "sides", "length_unit", "setup", "versions")
+
+
+def unit_of(name: str, length_unit: str) -> str:
+    """Return the unit of a variable of the layout, with the setup's length unit put in."""
+    check_choice("variable", name, NAMES)
+    unit = NAMES[name][0]
+    if not unit.startswith("L"):
+        return unit
+    return length_unit if length_unit == "1" else length_unit + unit[1:]
+
+
+def labelled(name: str, data, dims, *, length_unit: str = "1") -> xr.Variable:
+    """Return `data` as a Variable with the unit and long name that the layout gives to `name`.
+
+    Parameters
+    ----------
+    name : str
+        A name of the layout.
+    data : array_like
+    dims : tuple of str
+    length_unit : str
+        The setup's length unit.
+    """
+    return xr.Variable(dims, data, {"units": unit_of(name, length_unit), "long_name": NAMES[name][1]})
+
+
+def dataset(kind: str, variables: dict, coords: dict, attrs: dict) -> xr.Dataset:
+    """Build a result of a kind from ``{name: (dims, data)}`` and check it.
+
+    Parameters
+    ----------
+    kind : str
+        A key of `KINDS`.
+    variables, coords : dict
+        ``name: (dims, data)``; units and long names come from the layout.
+    attrs : dict
+        As `provenance` gives them; more may be added.
+    """
+    unit = attrs["length_unit"]
+
+    def label(entries):
+        return {name: labelled(name, data, dims, length_unit=unit) for name, (dims, data) in entries.items()}
+
+    result = xr.Dataset(label(variables), label(coords), {"kind": kind, **attrs})
+    check(result, kind)
+    return result
+
+
+def faults(result: xr.Dataset, kind: str) -> list[str]:
+    """Return everything in which a Dataset departs from the layout of its kind, in words."""
+    found = []
+    if result.attrs.get("kind") != kind:
+        found.append(f"attribute 'kind' is {result.attrs.get('kind')!r}, wanted {kind!r}")
+    found += [f"attribute {name!r} is missing" for name in ATTRIBUTES if name not in result.attrs]
+    for name, dims in KINDS[kind].items():
+        if name not in result:
+            found.append(f"variable {name!r} is missing")
+        elif tuple(d for d in result[name].dims if d != REALISATION) != dims:
+            found.append(f"variable {name!r} has dimensions {result[name].dims}, wanted {dims}")
+    for name, variable in result.variables.items():
+        if name not in NAMES:
+            found.append(f"variable {name!r} is not in the layout")
+        found += [f"variable {name!r} has no {key}" for key in ("units", "long_name") if key not in variable.attrs]
+        if np.iscomplexobj(variable) and name != "psi":
+            found.append(f"variable {name!r} is complex")
+    return found
+
+
+def check(result: xr.Dataset, kind: str) -> None:
+    """Raise `InputError` that lists every fault of a Dataset against the layout of `kind`."""
+    check_choice("kind", kind, KINDS)
+    if not isinstance(result, xr.Dataset):
+        raise InputError(f"expected an xarray.Dataset of kind {kind!r}; got {type(result).__name__}.")
+    found = faults(result, kind)
+    if found:
+        raise InputError(f"this is not a result of kind {kind!r}: " + "; ".join(found) + ".")
