@@ -28,6 +28,9 @@ def _angle(angle) -> float:
 class Source(ValueObject, abc.ABC):
     """What is sent into the window of a setup."""
 
+    normalisation = "intensity 1"
+    """What is 1: the incoming intensity of a wide wave, or the flux of a localised one."""
+
     @abc.abstractmethod
     def parts(self, setup) -> tuple[CoherentPart, ...]:
         """Return the coherent parts of the source in the window of a `Setup`."""
@@ -94,6 +97,8 @@ class PointSource(Source):
         Largest transverse momentum of the fan (sine of the angle), below 1.
     """
 
+    normalisation = "flux 1"
+
     x: float = attrs.field(default=0.0, converter=lambda s: check_number("x", s, high=0.0))
     y: float = attrs.field(default=0.0, converter=lambda s: check_number("y", s))
     half_angle: float = attrs.field(
@@ -134,7 +139,9 @@ class PointSource(Source):
             for row, one in zip(field, np.atleast_1d(k), strict=True):
                 top = int(one * self.half_angle * span / (2.0 * np.pi))
                 q = 2.0 * np.pi * np.arange(-top, top + 1) / span
-                amplitude = np.sqrt(2.0 * np.pi / one) / span * self._fan(q / one)
+                amplitude = self._fan(q / one)
+                # the box's modes as nodes of int a**2 dp = 1: weights made exact, so that the flux is 1
+                amplitude /= np.sqrt(span * (amplitude**2).sum())
                 row[:] = np.exp(1j * np.outer(y - self.y, q)) @ (amplitude * np.exp(0.5j * q**2 * self.x / one))
             return field
 
@@ -161,6 +168,8 @@ class Beam(Source):
     focus : float, optional
         Distance at which the rays of the beam meet; negative for a beam that spreads; None for a flat front.
     """
+
+    normalisation = "flux 1"
 
     waist: float = attrs.field(converter=lambda s: check_positive("waist", s))
     y: float = attrs.field(default=0.0, kw_only=True, converter=lambda s: check_number("y", s))
@@ -309,6 +318,11 @@ class AngularSpread(Source):
         _angle(self.rms_angle)
         if self.nodes % 2 == 0:
             raise InputError(f"nodes must be odd, so that the middle is among them; got {self.nodes}.")
+
+    @property
+    def normalisation(self) -> str:
+        """That of the source that is turned."""
+        return self.source.normalisation
 
     def parts(self, setup) -> tuple[CoherentPart, ...]:
         """Return one coherent part per angle (and per part of the source)."""

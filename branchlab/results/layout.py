@@ -15,7 +15,8 @@ from branchlab.conventions import (
 )
 from branchlab.errors import InputError, check_choice
 
-# unit of a variable: "1", or "L": the length unit of the setup (with a power, as in "L-1")
+# unit of a variable: "1"; "L": the length unit of the setup (with a power, as in "L-1"); "I" and "F": intensity and
+# flux, whose unit depends on the normalisation of the source
 NAMES = {
     X: ("L", "range"),
     Y: ("L", "transverse position"),
@@ -26,11 +27,11 @@ NAMES = {
     CAUSTIC: ("1", "number of the caustic point"),
     BRANCH: ("1", "number of the branch"),
     "v": ("1", "v = V/E = 1 - n**2"),
-    "intensity": ("1", "intensity, mean over a cell"),
+    "intensity": ("I", "intensity, mean over a cell"),
     "psi": ("1", "envelope of the wave"),
-    "flux": ("L", "flux through the screen"),
-    "lost_flux": ("L", "flux that left the window"),
-    "unresolved_flux": ("L", "flux in tubes too coarse to be resolved"),
+    "flux": ("F", "flux through the screen"),
+    "lost_flux": ("F", "flux that left the window"),
+    "unresolved_flux": ("F", "flux in tubes too coarse to be resolved"),
     "numerical_error": ("1", "numerical error, as misplaced flux"),
     "field_error": ("1", "relative numerical error of the field"),
     "spectral_tail": ("1", "share of the spectrum near the end of the grid's"),
@@ -50,12 +51,12 @@ NAMES = {
     "dpds": ("1", "turn of the front, dp/ds"),
     "s": ("1", "front parameter"),
     "part": ("1", "number of the coherent part"),
-    "ray_flux": ("L", "flux that the ray stands for"),
+    "ray_flux": ("F", "flux that the ray stands for"),
     "first_caustic": ("L", "range of the first caustic on the ray"),
     "order": ("1", "how many caustics the ray has passed, this one included"),
-    "intensity_ray": ("1", "ray density, smoothed to the resolution"),
-    "intensity_wave": ("1", "wave intensity, smoothed to the resolution"),
-    "mismatch": ("1", "wave intensity minus ray density"),
+    "intensity_ray": ("I", "ray density, smoothed to the resolution"),
+    "intensity_wave": ("I", "wave intensity, smoothed to the resolution"),
+    "mismatch": ("I", "wave intensity minus ray density"),
     "misplaced_flux": ("1", "misplaced flux"),
     "misplaced_flux_band": ("1", "misplaced flux of the band average"),
     "displacement": ("L", "displacement (Wasserstein-1 distance)"),
@@ -63,10 +64,10 @@ NAMES = {
     "correlation": ("1", "correlation of rays and wave"),
     "correlation_band": ("1", "correlation of rays and band average"),
     "resolved": ("1", "mismatch is above the numerical error"),
-    "interference": ("1", "semiclassical sum minus ray density"),
-    "removable": ("1", "interference that the band removes"),
-    "caustic_part": ("1", "interference that stays under the band, at caustics"),
-    "diffraction": ("1", "wave minus semiclassical sum"),
+    "interference": ("I", "semiclassical sum minus ray density"),
+    "removable": ("I", "interference that the band removes"),
+    "caustic_part": ("I", "interference that stays under the band, at caustics"),
+    "diffraction": ("I", "wave minus semiclassical sum"),
     "share_interference": ("1", "misplaced flux of the interference"),
     "share_removable": ("1", "misplaced flux of the removable interference"),
     "share_caustic": ("1", "misplaced flux of the caustic part"),
@@ -110,16 +111,20 @@ KINDS = {
 ATTRIBUTES = ("kind", "model", "sides", "length_unit", "setup", "versions")
 
 
-def unit_of(name: str, length_unit: str) -> str:
+NORMALISATIONS = {"intensity 1": {"I": "1", "F": "L"}, "flux 1": {"I": "L-1", "F": "1"}}
+
+
+def unit_of(name: str, *, length_unit: str, normalisation: str) -> str:
     """Return the unit of a variable of the layout, with the setup's length unit put in."""
     check_choice("variable", name, NAMES)
     unit = NAMES[name][0]
+    unit = NORMALISATIONS[normalisation].get(unit, unit)
     if not unit.startswith("L"):
         return unit
     return length_unit if length_unit == "1" else length_unit + unit[1:]
 
 
-def labelled(name: str, data, dims, *, length_unit: str = "1") -> xr.Variable:
+def labelled(name: str, data, dims, *, length_unit: str = "1", normalisation: str = "intensity 1") -> xr.Variable:
     """Return `data` as a Variable with the unit and long name that the layout gives to `name`.
 
     Parameters
@@ -130,8 +135,11 @@ def labelled(name: str, data, dims, *, length_unit: str = "1") -> xr.Variable:
     dims : tuple of str
     length_unit : str
         The setup's length unit.
+    normalisation : {"intensity 1", "flux 1"}
+        The source's: it decides the units of intensity and flux.
     """
-    return xr.Variable(dims, data, {"units": unit_of(name, length_unit), "long_name": NAMES[name][1]})
+    unit = unit_of(name, length_unit=length_unit, normalisation=normalisation)
+    return xr.Variable(dims, data, {"units": unit, "long_name": NAMES[name][1]})
 
 
 def dataset(kind: str, variables: dict, coords: dict, attrs: dict) -> xr.Dataset:
@@ -146,10 +154,10 @@ def dataset(kind: str, variables: dict, coords: dict, attrs: dict) -> xr.Dataset
     attrs : dict
         As `provenance` gives them; more may be added.
     """
-    unit = attrs["length_unit"]
+    units = {"length_unit": attrs["length_unit"], "normalisation": attrs.get("normalisation", "intensity 1")}
 
     def label(entries):
-        return {name: labelled(name, data, dims, length_unit=unit) for name, (dims, data) in entries.items()}
+        return {name: labelled(name, data, dims, **units) for name, (dims, data) in entries.items()}
 
     result = xr.Dataset(label(variables), label(coords), {"kind": kind, **attrs})
     check(result, kind)

@@ -27,6 +27,7 @@ def provenance(setup, *, model: str) -> dict[str, str]:
         "model": model,
         "sides": setup.sides,
         "length_unit": setup.length_unit,
+        "normalisation": setup.source.normalisation,
         "setup": setup.to_json(),
         "versions": json.dumps(versions()),
     }
