@@ -63,6 +63,11 @@ NAMES = {
     "displacement_band": ("L", "displacement of the band average"),
     "correlation": ("1", "correlation of rays and wave"),
     "correlation_band": ("1", "correlation of rays and band average"),
+    "numerical_error_band": ("1", "numerical error of the band average, as misplaced flux"),
+    "resolved_band": ("1", "mismatch of the band average is above its numerical error"),
+    "intensity_band": ("1", "wave intensity averaged over the band, smoothed to the resolution"),
+    "flux_mismatch": ("1", "flux of the wave over that of the rays, minus 1"),
+    "scintillation": ("1", "scintillation index"),
     "resolved": ("1", "mismatch is above the numerical error"),
     "interference": ("I", "semiclassical sum minus ray density"),
     "removable": ("I", "interference that the band removes"),
@@ -72,6 +77,24 @@ NAMES = {
     "share_removable": ("1", "misplaced flux of the removable interference"),
     "share_caustic": ("1", "misplaced flux of the caustic part"),
     "share_diffraction": ("1", "misplaced flux of the diffraction"),
+    "misplaced_interference": ("1", "portion of the misplaced flux due to interference"),
+    "misplaced_removable": ("1", "portion of the misplaced flux due to removable interference"),
+    "misplaced_caustic": ("1", "portion of the misplaced flux due to the caustic part"),
+    "misplaced_diffraction": ("1", "portion of the misplaced flux due to diffraction"),
+    "region": ("1", "number of the branch that the cell belongs to, 0 for none"),
+    "sort": ("1", "dark: rays fill what the wave leaves dark; stray: the reverse"),
+    "branch_wavelength": ("L", "wavelength at which the branch is found"),
+    "branch_realisation": ("1", "realisation in which the branch is found"),
+    "onset": ("L", "range at which the branch begins"),
+    "branch_length": ("L", "length of the branch along the range"),
+    "centre_x": ("L", "range of the branch's centre of flux"),
+    "centre_y": ("L", "transverse position of the branch's centre of flux"),
+    "branch_flux": ("1", "share of the flux that fills the branch, mean over its screens"),
+    "branch_excess": ("1", "share of the flux that the other side lacks there, mean over its screens"),
+    "contrast": ("1", "flux in the branch over the other side's"),
+    "relit": ("1", "the band average brings the contrast below the factor"),
+    "decided": ("1", "numerical error stays below the threshold as far as the range"),
+    "decided_band": ("1", "numerical error of the band average stays below the threshold as far as the range"),
     "reach": ("L", "validity range"),
     "reach_low": ("L", "validity range, lower end of the interval"),
     "reach_high": ("L", "validity range, upper end of the interval"),
@@ -106,7 +129,11 @@ KINDS = {
             for name in ("misplaced_flux", "displacement", "correlation", "numerical_error", "resolved")
         },
     },
-    "validity": {name: (WAVELENGTH,) for name in ("reach", "reach_low", "reach_high", "crossed")},
+    "validity": {name: (WAVELENGTH,) for name in ("reach", "reach_low", "reach_high", "crossed", "decided")},
+    "branches": {
+        name: (BRANCH,)
+        for name in ("sort", "onset", "branch_length", "centre_x", "centre_y", "branch_flux", "contrast")
+    },
 }
 ATTRIBUTES = ("kind", "model", "sides", "length_unit", "setup", "versions")
 
