@@ -1,0 +1,1 @@
+"""Waves summed over rays."""
