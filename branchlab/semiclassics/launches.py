@@ -1,0 +1,135 @@
+"""What each method of summing sends through the medium, and what it makes of the rays on a screen."""
+
+import numpy as np
+
+from branchlab.launch.part import CoherentPart, FrontRays
+from branchlab.semiclassics.branches import find_branches
+from branchlab.semiclassics.frozen import FrozenGaussians
+from branchlab.semiclassics.herman_kluk import HermanKluk, PhaseSpace
+from branchlab.semiclassics.manifold import Line, Manifold
+from branchlab.semiclassics.uniform import AiryPairs, primitive_sum
+
+LOOSE_ACTION = 0.5
+"""Radians by which the action between two rays may miss the integral of p dy, before their flux is unresolved."""
+
+
+def launch_rays(part: CoherentPart, count: int) -> tuple[FrontRays, float]:
+    """Return `count` rays in the middles of equal steps of the front parameter, and the step."""
+    low, high = part.front.span
+    ds = (high - low) / count
+    return part.front.at(low + (np.arange(count) + 0.5) * ds), ds
+
+
+def manifold_on(part: CoherentPart, rays: FrontRays, ds: float, state) -> Manifold:
+    """Return the front of a part as it stands on a screen."""
+    y = np.ascontiguousarray(state.y, dtype=np.float64)
+    return Manifold(
+        y,
+        state.p - part.tilt,
+        state.action - part.tilt * y,
+        np.ascontiguousarray(state.A),
+        np.ascontiguousarray(state.C),
+        state.maslov,
+        np.ascontiguousarray(rays.amplitude),
+        ds,
+        part.front.span[1] - part.front.span[0] if part.front.closed else 0.0,
+        part.front.phase,
+    )
+
+
+class FrontLaunch:
+    """The rays of one launching front, summed as frozen Gaussians or branch by branch.
+
+    Parameters
+    ----------
+    part : CoherentPart
+    k : ndarray, shape (k,)
+        All wavenumbers; they share the rays.
+    method : {"frozen-gaussian", "uniform", "primitive"}
+    gamma, reach : float
+        Of frozen Gaussians.
+    count : int
+        Number of rays.
+    """
+
+    matrix = False
+
+    def __init__(self, part: CoherentPart, k, method: str, gamma: float, reach: float, count: int):
+        self.part, self.k, self.method, self.gamma, self.reach = part, k, method, gamma, reach
+        self.rays, self.ds = launch_rays(part, count)
+
+    def on(self, state) -> "FrontScreen":
+        """Return the sum on the screen of a ray state."""
+        return FrontScreen(self, manifold_on(self.part, self.rays, self.ds, state))
+
+
+class FrontScreen:
+    """One front on one screen."""
+
+    def __init__(self, launch: FrontLaunch, manifold: Manifold):
+        self.launch, self.manifold = launch, manifold
+        self.frozen = None
+        if launch.method == "frozen-gaussian":
+            self.frozen = FrozenGaussians(manifold, launch.gamma, launch.reach)
+        self.found = {}
+
+    def _on(self, line: Line):
+        """Return the branches on a line, found once for all wavelengths that share it."""
+        if line not in self.found:
+            uniform = self.launch.method == "uniform"
+            self.found[line] = AiryPairs(self.manifold, line) if uniform else find_branches(self.manifold, line)
+        return self.found[line]
+
+    def field(self, which: int, line: Line) -> np.ndarray:
+        """Return the envelope for the wavenumber launch.k[which], shape (n,)."""
+        k = self.launch.k[which]
+        if self.frozen:
+            return self.frozen.field(k, line)
+        found = self._on(line)
+        psi = found.field(k) if self.launch.method == "uniform" else primitive_sum(found, k, line.n)
+        return psi * np.exp(1j * self.manifold.phase)
+
+    def flux(self, half_width: float) -> float:
+        """Return the flux of the rays at abs(y) <= half_width."""
+        inside = np.abs(self.manifold.y) <= half_width if not self.manifold.lap else slice(None)
+        return float(self.manifold.flux[inside].sum())
+
+    def unresolved(self, which: int, line: Line) -> float:
+        """Return the flux on rays that are too far apart for the wavenumber launch.k[which]."""
+        k = self.launch.k[which]
+        if self.frozen:
+            return self.frozen.unresolved(k)
+        found = self._on(line)
+        branches = found.branches if self.launch.method == "uniform" else found
+        loose = k * np.abs(branches.gaps) > LOOSE_ACTION
+        loose[np.floor(branches.folds[branches.torn, 0]).astype(np.int64)] = True
+        return float(self.manifold.flux[: loose.size][loose].sum())
+
+
+class PhaseSpaceLaunch:
+    """The packets of the Herman-Kluk sum for wavenumbers that share their rays.
+
+    Parameters
+    ----------
+    part : CoherentPart
+    k : ndarray, shape (k,)
+    line : Line
+        The box.
+    gamma, reach, spacing : float
+        See `PhaseSpace`.
+    """
+
+    matrix = True
+
+    def __init__(self, part: CoherentPart, k, line: Line, gamma: float, reach: float, spacing: float):
+        self.part, self.k = part, k
+        self.space = PhaseSpace(part, line, k, gamma, spacing, reach)
+        self.rays = self.space.rays
+        rays, ds = launch_rays(part, 4096)
+        self.sent = float(np.sum(rays.amplitude**2) * ds)
+
+    def on(self, state) -> HermanKluk:
+        """Return the sum on the screen of a ray state."""
+        y = np.ascontiguousarray(state.y)
+        p, action = state.p - self.part.tilt, state.action - self.part.tilt * y
+        return HermanKluk(self.space, self.sent, y, p, action, (state.A, state.B, state.C, state.D), state.maslov)

@@ -1,0 +1,25 @@
+"""When a semiclassical sum is not to be trusted: the limits, in one place."""
+
+import numpy as np
+
+FLUX_EXCESS_LIMIT = 0.15
+"""Largest abs(flux of the sum / flux of its rays - 1). The sum is not unitary; flux that it makes or loses is flux
+that it also misplaces. At 15 % that is as much as a typical mismatch of rays and wave, so that the sum could no
+longer tell where the mismatch comes from (measured: its distance to the wave grows with the excess)."""
+
+UNRESOLVED_LIMIT = 0.05
+"""Largest share of the flux on rays too far apart for the wavelength. What they carry is missing from the sum, and
+5 % missing is seen in a misplaced flux that is to be attributed to some percent."""
+
+
+def trusted(flux_excess, unresolved_share):
+    """Return where the sum's own alarm is silent.
+
+    Parameters
+    ----------
+    flux_excess : array
+        Flux of the sum over that of its rays, minus 1.
+    unresolved_share : array
+        Unresolved flux over that of the rays.
+    """
+    return (np.abs(flux_excess) <= FLUX_EXCESS_LIMIT) & (unresolved_share <= UNRESOLVED_LIMIT)
