@@ -127,7 +127,7 @@ def branches(result: xr.Dataset, factor: float = 2.0, *, brightness: float = 1.0
         A factor of 1 or less; a result that is not a comparison.
     """
     check(result, "comparison")
-    factor = check_number("factor", factor, low=1.0, open_low=True)
+    factor = check_number("factor", factor, low=1.0, open_low=True, open_high=True)
     brightness = check_number("brightness", brightness, low=0.0)
     x, y = (np.asarray(result[axis].values, dtype=np.float64) for axis in (X, Y))
     if x.size < 2:

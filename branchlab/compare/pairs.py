@@ -30,8 +30,8 @@ def differences(first: str, second: str) -> list[str]:
 
     def walk(a, b, path):
         if isinstance(a, dict) and isinstance(b, dict) and a.keys() == b.keys() and "base64" not in a:
-            for key in [*a, *(key for key in b if key not in a)]:
-                walk(a.get(key), b.get(key), [*path, key])
+            for key in a:
+                walk(a[key], b[key], [*path, key])
         elif isinstance(a, list) and isinstance(b, list) and len(a) == len(b):
             for i, (one, other) in enumerate(zip(a, b, strict=True)):
                 walk(one, other, [*path, str(i)])
