@@ -1,0 +1,1 @@
+"""Rays: traced once for every wavelength, their density, caustics and sections."""

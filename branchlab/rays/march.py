@@ -1,0 +1,120 @@
+"""Paraxial rays from screen to screen, in true coordinates on every screen."""
+
+import functools
+from collections.abc import Iterator
+from typing import NamedTuple
+
+import numpy as np
+
+from branchlab.kernels.ray_step import BLOCK, FRONT_ROWS, MATRIX_ROWS, from_true, march_parallel, to_true
+from branchlab.launch.part import FrontRays
+from branchlab.rays.table import STEPS_PER_SCALE, KickTable
+
+OK, LEFT, TURNED, NOT_FINITE = 0, 1, 2, 3
+STATUS = {OK: "ok", LEFT: "left the window's box", TURNED: "turned too far for a paraxial ray", NOT_FINITE: "lost"}
+STEEPEST = 1.0  # |p| is the sine of the angle to x: beyond this a ray has turned back
+
+
+class RayState(NamedTuple):
+    """Rays on one screen, arrays of shape (ray,).
+
+    (A, C) is the tangent d(y, p) of the front, or with a full matrix its first column d(y, p)/dy0, and (B, D) the
+    second, d(y, p)/dp0. What was sent beyond the window's box, or turned too far, keeps its numbers and has a
+    `status` other than `OK`.
+    """
+
+    x: float
+    y: np.ndarray
+    p: np.ndarray
+    action: np.ndarray
+    A: np.ndarray
+    C: np.ndarray
+    maslov: np.ndarray
+    status: np.ndarray
+    B: np.ndarray | None = None
+    D: np.ndarray | None = None
+
+
+class Marcher:
+    """March rays through the window of a setup; the tables are built once.
+
+    Paraxial rays: dy/dx = p, dp/dx = -W_y, dS/dx = p**2/2 - W with W = v/2. Each step is drift, kick, drift with
+    the gradient-corrected potential; between the entry and a screen the map is conjugate to a fourth-order one,
+    and the coordinates given out are those of the fourth-order map.
+
+    Parameters
+    ----------
+    setup : Setup
+    steps_per_scale : int
+        Steps per medium scale, at least.
+    """
+
+    def __init__(self, setup, steps_per_scale: int = STEPS_PER_SCALE):
+        self.setup = setup
+        self.steps_per_scale = steps_per_scale
+
+    @functools.cached_property
+    def table(self) -> KickTable:
+        """The medium's spline tables."""
+        return KickTable(self.setup, self.setup.steps_per_screen(self.setup.medium.scale / self.steps_per_scale))
+
+    def march(self, rays: FrontRays, matrix: bool = False) -> Iterator[RayState]:
+        """Yield the rays on every screen of the setup, the entry first.
+
+        Parameters
+        ----------
+        rays : FrontRays
+            Rays at x = 0. Without `matrix`, (dy, dp) is the tangent that is carried along.
+        matrix : bool
+            Carry the full stability matrix from the identity instead.
+
+        Yields
+        ------
+        RayState
+            Fresh arrays: the caller may keep them.
+        """
+        count = rays.y.size
+        state = np.zeros((MATRIX_ROWS if matrix else FRONT_ROWS, -(-count // BLOCK) * BLOCK))
+        state[0, :count], state[1, :count], state[2, :count] = rays.y, rays.p, rays.action
+        if matrix:
+            state[3] = state[7] = 1.0
+        else:
+            state[3, :count], state[4, :count] = rays.dy, rays.dp
+        table = self.table
+        box = table.cells, table.start, table.inverse
+        status = np.zeros(count, dtype=np.int8)
+        yield self._given(state, 0, count, status)
+        from_true(state, table.potential[0], table.gradient[0], *box, table.strength)
+        for screen in range(1, self.setup.x.size):
+            last = screen * table.steps_per_screen
+            march_parallel(state, table.flat, *box, table.step, last - table.steps_per_screen, last)
+            true = state.copy()
+            to_true(true, table.potential[screen], table.gradient[screen], *box, table.strength)
+            self._settle(true)
+            yield self._given(true, screen, count, status)
+
+    def _given(self, state, screen, count, status) -> RayState:
+        """Return the first `count` rays, with their status brought up to date (in place)."""
+        y, p = state[0, :count], state[1, :count]
+        finite = np.isfinite(y) & np.isfinite(p)
+        now = np.where(np.abs(y) > 0.5 * self.setup.window.span, LEFT, OK)
+        if not self.setup.window.pad:
+            now[:] = OK
+        now[finite & (np.abs(p) >= STEEPEST)] = TURNED
+        now[~finite] = NOT_FINITE
+        status[status == OK] = now[status == OK]
+        rows = [state[row, :count].copy() for row in range(state.shape[0])]
+        second = rows[6:8] if state.shape[0] == MATRIX_ROWS else (None, None)
+        return RayState(float(self.setup.x[screen]), *rows[:6], status.copy(), *second)
+
+    @staticmethod
+    def _settle(state) -> None:
+        """Make the Maslov index agree with the sign of the true A.
+
+        It was counted on the kernel map, whose caustics lie O(step**2) from the true ones; behind a caustic A and
+        C have one sign, before it they have opposite signs.
+        """
+        a, c, maslov = state[3], state[4], state[5]
+        parity = 1.0 - 2.0 * np.mod(maslov, 2.0)
+        wrong = a * parity < 0.0
+        maslov[wrong] += np.where(a[wrong] * c[wrong] > 0.0, 1.0, -1.0)
