@@ -4,6 +4,7 @@ import numpy as np
 from scipy.special import airy
 
 from branchlab.semiclassics.branches import Branches, find_branches
+from branchlab.semiclassics.complex_rays import ComplexRays
 from branchlab.semiclassics.manifold import Line, Manifold
 
 CLOSE = 1e-4
@@ -42,6 +43,12 @@ def _fade(t):
     return 1.0 - t * t * (3.0 - 2.0 * t)
 
 
+def _uniform(z, total, difference):
+    """Return sqrt(pi) [total Ai(-z) - i difference Ai'(-z)]."""
+    value, slope = airy(-z)[:2]
+    return np.sqrt(np.pi) * (total * value - 1j * difference * slope)
+
+
 class AiryPairs:
     """What the uniform form of every fold adds to the primitive sum on one line.
 
@@ -50,8 +57,7 @@ class AiryPairs:
         exp(i k (S0 + S1)/2 - i pi (m + 1/2)/2) sqrt(pi) [(a0 + a1) z**(1/4) Ai(-z) - i (a0 - a1) z**(-1/4) Ai'(-z)]
 
     with z = (3 k (S1 - S0)/4)**(2/3) (Chester, Friedman & Ursell, Proc. Camb. Phil. Soc. 53 (1957) 599). Beyond
-    the fold the two branches go on as complex conjugate rays: roots of the polynomial through six rays around
-    the fold.
+    the fold the two branches go on as complex conjugate rays (`ComplexRays`).
 
     Parameters
     ----------
@@ -63,10 +69,9 @@ class AiryPairs:
         self.manifold, self.line = manifold, line
         self.branches = branches = find_branches(manifold, line)
         usable = np.isfinite(branches.folds[:, 1]) & ~branches.torn
-        self.number = np.flatnonzero(usable)
-        # s: dy/ds at the fold is 0; Y - y = curvature (s - s_f)**2 / 2, p - p_f = turn (s - s_f)
-        self.place, self.slope, self.path = branches.folds[usable, 1:4].T
-        self.curvature, self.turn, self.amplitude = branches.folds[usable, 4:7].T
+        self.folds = branches.folds[usable]
+        # near the fold Y - place = curvature (s - s_f)**2 / 2 and p - slope = turn (s - s_f)
+        _, self.place, self.slope, self.path, self.curvature, self.turn, self.amplitude = self.folds.T
         self.side = np.where(self.curvature > 0, 1, -1)  # towards the lit side
         before, after = branches.before[usable], branches.after[usable]
         self.index = np.minimum(branches.maslov[before], branches.maslov[after])
@@ -97,138 +102,50 @@ class AiryPairs:
     def field(self, k: float) -> np.ndarray:
         """Return the uniform sum for one wavenumber, shape (n,)."""
         psi = primitive_sum(self.branches, k, self.line.n)
-        if self.number.size:
-            psi += self._lit(k) + self._dark(k)
-        return psi
+        if self.folds.shape[0] == 0:
+            return psi
+        rays = ComplexRays(self.manifold, self.folds, k)
+        # the amplitudes of the uniform form at the folds themselves, from just behind them
+        every = np.arange(self.side.size)
+        _, total, difference, _ = rays.beyond(every, -self.side * CLOSE * rays.width)
+        return psi + self._lit(k, rays.width, total, difference) + self._dark(k, rays)
 
     def _first_column(self):
         """Return the first point on the lit side of each fold."""
         at = (self.place - self.line.start) / self.line.pitch - 0.5
         return np.where(self.side > 0, np.ceil(at), np.ceil(at) - 1).astype(np.int64)
 
-    def _width(self, k):
-        """Return the Airy width of each fold, z = distance/width to first order."""
-        return 0.5 * np.abs(self.curvature) * (0.5 * k * np.abs(self.turn * self.curvature)) ** (-2.0 / 3.0)
-
-    def _on_fold(self, fold, z, k):
-        """Return the limit of a pair at its fold (local Airy function), without the path's phase."""
-        strength = (0.5 * k * np.abs(self.turn * self.curvature)) ** (1.0 / 6.0) / np.sqrt(np.abs(self.curvature))
-        return 2.0 * np.sqrt(np.pi) * (self.amplitude * strength)[fold] * airy(-z)[0]
-
-    def _lit(self, k):
+    def _lit(self, k, width, total, difference):
         """Return uniform minus primitive pairs on the lit side of all folds."""
         fold, (path0, path1), (size0, size1) = self.pair, self.pair_path, self.pair_size
-        local = self.pair_distance / self._width(k)[fold]
+        local = self.pair_distance / width[fold]
         z = np.maximum((0.75 * k * np.maximum(path1 - path0, 0.0)) ** (2.0 / 3.0), CLOSE)
-        ai, slope = airy(-z)[:2]
-        pair = np.sqrt(np.pi) * ((size0 + size1) * z**0.25 * ai - 1j * (size0 - size1) * z**-0.25 * slope)
-        pair = np.where(local < CLOSE, self._on_fold(fold, local, k), pair)
+        close = local < CLOSE
+        pair = _uniform(
+            np.where(close, local, z),
+            np.where(close, total[fold], (size0 + size1) * z**0.25),
+            np.where(close, difference[fold], (size0 - size1) * z**-0.25),
+        )
         common = np.exp(1j * (0.5 * k * (path0 + path1) - 0.5 * np.pi * (self.index[fold] + 0.5)))
         half = np.exp(1j * (0.5 * k * (path1 - path0) - 0.25 * np.pi))
         change = common * (pair - size0 / half - size1 * half)
         # a branch that ends at another fold leaves the pair before it gets there
-        farthest = np.zeros(self.number.size)
+        farthest = np.zeros(width.size)
         np.maximum.at(farthest, fold, z)
         change *= np.where(self.closed[fold], _fade(z / farthest[fold]), 1.0)
         return _gather(self.pair_column, change, self.line.n)
 
-    def _dark(self, k):
+    def _dark(self, k, rays):
         """Return the fields beyond all folds."""
-        width = self._width(k)
         first = self._first_column()
-        reach = np.minimum(np.floor(DARK * width / self.line.pitch), self.line.n).astype(np.int64) + 1
+        reach = np.minimum(np.floor(DARK * rays.width / self.line.pitch), self.line.n).astype(np.int64) + 1
         begin = np.where(self.side > 0, first - reach, first + 1)
         fold, column = _ranges(begin, begin + reach)
         if not self.line.periodic:
             inside = (column >= 0) & (column < self.line.n)
             fold, column = fold[inside], column[inside]
         offset = self.line.start + (column + 0.5) * self.line.pitch - self.place[fold]
-        local = np.abs(offset) / width[fold]
-        plain = self._on_fold(fold, -local, k) * np.exp(1j * k * (self.path[fold] + self.slope[fold] * offset))
-        path, spread, good = self._complex_rays(k, fold, offset)
-        z = np.where(good, (1.5 * k * np.abs(path.imag)) ** (2.0 / 3.0), 1.0)
-        tilt = 0.5 * (np.angle(spread) - 0.5 * np.pi)
-        size = 1.0 / np.sqrt(np.abs(spread))
-        ai, slope = airy(z)[:2]
-        pair = 2.0 * size * np.sqrt(np.pi) * (np.cos(tilt) * z**0.25 * ai - 1j * np.sin(tilt) * z**-0.25 * slope)
-        pair = np.where(good & (local > CLOSE), pair * np.exp(1j * k * path.real), plain)
-        return _gather(column, pair * np.exp(-0.5j * np.pi * (self.index[fold] + 0.5)), self.line.n)
-
-    def _complex_rays(self, k, fold, offset):
-        """Solve y(s) = Y beyond the folds, with s complex.
-
-        Returns the action and e (dy/ds)/amplitude**2 of the ray with the higher index, e the sign of its dy/ds
-        on the lit side, and where the root can be trusted: within three spacings of the polynomial's rays. The
-        other ray is the conjugate one.
-        """
-        y, p, amplitude, unit = self._polynomials(k)
-        dy, full = _derivative(y), _integral(_product(p, _derivative(y)))
-        # the late branch lies on the side where (dy/ds)(dp/ds) > 0
-        way = np.sign(self.curvature * self.turn)[fold]
-        s = 1j * way * np.sqrt(2.0 * np.abs(offset / self.curvature[fold])) / unit[fold]
-        for _ in range(8):
-            slope = _value(dy[:, fold], s)
-            s = s - (_value(y[:, fold], s) - offset) / np.where(slope == 0, 1.0, slope)
-        residual = np.abs(_value(y[:, fold], s) - offset)
-        good = (np.abs(s) < 3.0) & (residual < 1e-6 * np.abs(offset)) & (s.imag * way > 0)
-        path = self.path[fold] + self.slope[fold] * offset + _value(full[:, fold], s)
-        size = _value(amplitude[:, fold], s)
-        good &= np.abs(size) > 0.1 * self.amplitude[fold]
-        spread = np.sign(self.turn[fold]) * _value(dy[:, fold], s) / unit[fold] / np.where(good, size, 1.0) ** 2
-        return path, np.where(good, spread, 1j), good
-
-    def _polynomials(self, k):
-        """Return y - y_f, p - p_f and amplitude around each fold as polynomials, and their unit of s.
-
-        Shapes (12, fold), (12, fold), (6, fold), (fold,). Through six rays: the two next to the fold and two on
-        either side, the outer ones as far off as the complex rays at z = 1 are from the fold.
-        """
-        m = self.manifold
-        rays, at = m.y.size, self.branches.folds[self.number, 0]
-        i = np.floor(at).astype(np.int64)
-        far = np.sqrt(2.0 * self._width(k) / np.abs(self.curvature)) / m.ds
-        gap = np.diff(at, prepend=-np.inf, append=np.inf)
-        far = np.minimum(far, np.minimum(gap[:-1], gap[1:]))  # not beyond the neighbouring folds
-        far = np.clip(np.rint(far), 2, max(rays // 8, 2)).astype(np.int64)
-        near = (far + 1) // 2
-        nodes = np.stack([i - far, i - near, i, i + 1, i + 1 + near, i + 1 + far])
-        if m.lap == 0.0:
-            nodes += np.maximum(-nodes[0], 0) - np.maximum(nodes[-1] - rays + 1, 0)
-        lap, wrapped = np.divmod(nodes, rays)
-        unit = far * m.ds
-        t = (nodes - at) / far
-        powers = t[..., None] ** np.arange(12)
-        slopes = np.arange(12) * t[..., None] ** np.maximum(np.arange(12) - 1, 0)
-        matrix = np.concatenate([powers, slopes]).transpose(1, 0, 2)
-        y = np.concatenate([m.y[wrapped] + lap * m.lap - self.place, m.A[wrapped] * unit])
-        p = np.concatenate([m.p[wrapped] - self.slope, m.C[wrapped] * unit])
-        both = np.linalg.solve(matrix, np.stack([y, p], axis=-1).transpose(1, 0, 2))
-        amplitude = np.linalg.solve(powers[..., :6].transpose(1, 0, 2), m.amplitude[wrapped].T[..., None])
-        return both[:, :, 0].T, both[:, :, 1].T, amplitude[:, :, 0].T, unit
-
-
-def _value(polynomial, s):
-    """Horner's rule; coefficients along the first axis, rising."""
-    total = polynomial[-1] * np.ones_like(s)
-    for row in polynomial[-2::-1]:
-        total = total * s + row
-    return total
-
-
-def _derivative(polynomial):
-    """Return the coefficients of the derivative."""
-    return polynomial[1:] * np.arange(1, polynomial.shape[0])[:, None]
-
-
-def _integral(polynomial):
-    """Return the coefficients of the integral from 0."""
-    inner = polynomial / np.arange(1, polynomial.shape[0] + 1)[:, None]
-    return np.concatenate([np.zeros((1, polynomial.shape[1])), inner])
-
-
-def _product(a, b):
-    """Return the coefficients of a product."""
-    total = np.zeros((a.shape[0] + b.shape[0] - 1, a.shape[1]))
-    for power, row in enumerate(b):
-        total[power : power + a.shape[0]] += a * row
-    return total
+        closest = np.maximum(np.abs(offset), CLOSE * rays.width[fold])
+        z, total, difference, path = rays.beyond(fold, -self.side[fold] * closest)
+        phase = k * path - 0.5 * np.pi * (self.index[fold] + 0.5)
+        return _gather(column, _uniform(-z, total, difference) * np.exp(1j * phase), self.line.n)
