@@ -5,6 +5,8 @@ package is quick and loads no compiler and no notebook library.
 """
 
 import importlib
+import sys
+import types
 
 _HOMES = {
     # the medium
@@ -40,6 +42,17 @@ _HOMES = {
 }
 __all__ = list(_HOMES)
 __version__ = "0.1.0"
+
+
+class _Package(types.ModuleType):
+    """Keeps `branchlab.compare` the function: importing the folder of that name would put the folder there."""
+
+    def __setattr__(self, name, thing):
+        if not (name == "compare" and isinstance(thing, types.ModuleType)):
+            super().__setattr__(name, thing)
+
+
+sys.modules[__name__].__class__ = _Package
 
 
 def __getattr__(name):

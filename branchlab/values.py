@@ -57,7 +57,7 @@ def _pack(thing):
         return thing.to_dict()
     if isinstance(thing, np.ndarray):
         data = base64.b64encode(np.ascontiguousarray(thing).tobytes()).decode("ascii")
-        return {"kind": "array", "dtype": thing.dtype.str, "shape": list(thing.shape), "base64": data}
+        return {"type": "array", "dtype": thing.dtype.str, "shape": list(thing.shape), "base64": data}
     if isinstance(thing, np.generic):
         return thing.item()
     if isinstance(thing, (tuple, list)):
@@ -71,7 +71,7 @@ def _unpack(thing):
         return tuple(_unpack(item) for item in thing)
     if not isinstance(thing, dict):
         return thing
-    if thing.get("kind") == "array":
+    if thing.get("type") == "array":
         try:
             raw = base64.b64decode(thing["base64"], validate=True)
             return np.frombuffer(raw, dtype=np.dtype(thing["dtype"])).reshape(thing["shape"])
@@ -94,21 +94,21 @@ class ValueObject:
         return type(self)(**{**fields, **changes})
 
     def to_dict(self) -> dict:
-        """Return a JSON-able dict ``{"kind": class name, field: value, ...}``."""
+        """Return a JSON-able dict ``{"type": class name, field: value, ...}``."""
         packed = {f.alias: _pack(getattr(self, f.name)) for f in attrs.fields(type(self)) if f.init}
-        return {"kind": type(self).__name__, **packed}
+        return {"type": type(self).__name__, **packed}
 
     @classmethod
     def from_dict(cls, fields: dict):
         """Return the object that `to_dict` described; called on a class, it must be of that class."""
-        if not isinstance(fields, dict) or "kind" not in fields:
-            raise InputError(f"expected an object with a 'kind'; got {str(fields)[:60]!r}.")
-        kind = fields["kind"]
+        if not isinstance(fields, dict) or "type" not in fields:
+            raise InputError(f"expected an object with a 'type'; got {str(fields)[:60]!r}.")
+        kind = fields["type"]
         if kind not in _KINDS:
             raise InputError(
-                f"kind {kind!r} is not known; known: {', '.join(sorted(_KINDS))}.{suggestion(kind, _KINDS)}"
+                f"type {kind!r} is not known; known: {', '.join(sorted(_KINDS))}.{suggestion(kind, _KINDS)}"
             )
-        made = _KINDS[kind](**{k: _unpack(v) for k, v in fields.items() if k != "kind"})
+        made = _KINDS[kind](**{k: _unpack(v) for k, v in fields.items() if k != "type"})
         if not isinstance(made, cls):
             raise InputError(f"expected a {cls.__name__}; the text describes a {kind}.")
         return made

@@ -6,8 +6,7 @@ from scipy import stats
 
 from branchlab.conventions import REALISATION, WAVELENGTH, X
 from branchlab.errors import InputError, check_integer, check_number, check_positive
-from branchlab.results import check, dataset
-from branchlab.values import ValueObject
+from branchlab.results import check, dataset, setup_of
 
 
 def first_crossing(curves: np.ndarray, x: np.ndarray, threshold: float, persistence: float):
@@ -55,11 +54,11 @@ def first_crossing(curves: np.ndarray, x: np.ndarray, threshold: float, persiste
 def _persistence(result: xr.Dataset) -> float:
     """Return the medium's scale from the setup that the result carries."""
     try:
-        return float(ValueObject.from_json(result.attrs["setup"]).medium.scale)
-    except (InputError, AttributeError) as fault:
+        return float(setup_of(result).medium.scale)
+    except InputError as fault:
         raise InputError(
-            f"the medium's scale cannot be read from the setup of this result ({fault}); it is the default of "
-            "persistence. Use persistence=..., a length such as the correlation length."
+            f"the default of persistence is the medium's scale, and no setup can be read: {fault} "
+            "Use persistence=..., a length such as the correlation length."
         ) from None
 
 

@@ -6,6 +6,7 @@ from typing import NamedTuple
 
 import numpy as np
 
+from branchlab.errors import RangeError
 from branchlab.kernels.ray_step import BLOCK, FRONT_ROWS, MATRIX_ROWS, from_true, march_parallel, to_true
 from branchlab.launch.part import FrontRays
 from branchlab.rays.table import STEPS_PER_SCALE, KickTable
@@ -35,6 +36,18 @@ class RayState(NamedTuple):
     D: np.ndarray | None = None
 
 
+def refuse_turned(state: RayState) -> None:
+    """Raise `RangeError` if a ray has turned so far that it is not paraxial."""
+    turned = np.flatnonzero(state.status == TURNED)
+    if turned.size:
+        at = turned[np.argmax(np.abs(state.p[turned]))]
+        raise RangeError(
+            f"a ray reaches the transverse momentum {state.p[at]:.3g} at x = {state.x:.4g}, y = {state.y[at]:.4g}; |p| "
+            "is the sine of its angle to the x axis and must stay below 1: beyond, the ray turns back and the paraxial "
+            "model has no meaning. Reduce the medium's strength or the length."
+        )
+
+
 class Marcher:
     """March rays through the window of a setup; the tables are built once.
 
@@ -56,7 +69,8 @@ class Marcher:
     @functools.cached_property
     def table(self) -> KickTable:
         """The medium's spline tables."""
-        return KickTable(self.setup, self.setup.steps_per_screen(self.setup.medium.scale / self.steps_per_scale))
+        longest = self.setup.medium.scale / self.steps_per_scale
+        return KickTable(self.setup, self.setup.steps_per_screen(longest))
 
     def march(self, rays: FrontRays, matrix: bool = False) -> Iterator[RayState]:
         """Yield the rays on every screen of the setup, the entry first.

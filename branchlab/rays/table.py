@@ -4,7 +4,7 @@ import math
 
 import numpy as np
 
-from branchlab.errors import check_memory
+from branchlab.errors import RangeError, check_memory
 from branchlab.kernels.spline import CELL, quintic_cells
 
 POINTS_PER_SCALE = 8  # quintic splines this dense: relative rms errors 2.5e-7, 3.6e-6, 6.9e-5 of v, v_y, v_yy
@@ -18,6 +18,16 @@ def _slope(rows, span: float) -> np.ndarray:
     q = 2.0 * np.pi * np.fft.rfftfreq(n, span / n)
     q[-1] = 0.0 if n % 2 == 0 else q[-1]
     return np.fft.irfft(1j * q * np.fft.rfft(rows, axis=-1), n=n, axis=-1)
+
+
+def _refuse_walls(v, x, y) -> None:
+    """Raise `RangeError` with the place if v reaches 1."""
+    if v.max() >= 1.0:
+        i, j = np.unravel_index(np.argmax(v), v.shape)
+        raise RangeError(
+            f"v = {v[i, j]:.3g} at x = {x[i]:.4g}, y = {y[j]:.4g}; rays exist only where v < 1 (v = 1 - n**2: the "
+            "index is imaginary beyond). Reduce the medium's strength, or choose a window that leaves the place out."
+        )
 
 
 class KickTable:
@@ -43,8 +53,11 @@ class KickTable:
         53 (1984) 3765; Rowlands, J. Comput. Phys. 97 (1991) 235).
     potential, gradient : ndarray, shape (screens, cells * CELL)
         W and W_x at the screens, for the processor.
-    largest : float
-        Largest v on the table.
+
+    Raises
+    ------
+    RangeError
+        v >= 1 somewhere in the window: no ray can go there.
     """
 
     def __init__(self, setup, steps_per_screen: int, points_per_scale: int = POINTS_PER_SCALE):
@@ -62,11 +75,11 @@ class KickTable:
         self.cells, self.inverse = n, n / window.span
         self.start = window.points(n)[0]
         self.kicks = np.empty((steps, n * CELL))
-        self.largest = -math.inf
         middles = (np.arange(steps) + 0.5) * self.step
+        inside = np.abs(window.points(n)) <= 0.5 * setup.width
         for at in range(0, steps, ROWS_AT_ONCE):
             v = window.rows(middles[at : at + ROWS_AT_ONCE], n)
-            self.largest = max(self.largest, float(v.max()))
+            _refuse_walls(v[:, inside], middles[at : at + ROWS_AT_ONCE], window.points(n)[inside])
             corrected = 0.5 * v - self.strength * (0.5 * _slope(v, window.span)) ** 2
             self.kicks[at : at + ROWS_AT_ONCE] = quintic_cells(corrected).reshape(v.shape[0], -1)
         self.potential = quintic_cells(0.5 * window.rows(screens, n)).reshape(screens.size, -1)

@@ -63,9 +63,9 @@ def test_pickle_holds_arguments_only():
         (lambda: Probe(1.0, sample=3), "has no argument 'sample'.*Did you mean 'samples'"),
         (lambda: Probe(), "missing a required argument: 'size'; it takes size, samples, inner"),
         (lambda: ValueObject.from_json("{"), "not JSON"),
-        (lambda: ValueObject.from_json('{"size": 1}'), "expected an object with a 'kind'"),
-        (lambda: ValueObject.from_json('{"kind": "Prob"}'), "Did you mean 'Probe'"),
-        (lambda: ValueObject.from_json('{"kind": "Probe", "size": 1, "siz": 2}'), "Did you mean 'size'"),
+        (lambda: ValueObject.from_json('{"size": 1}'), "expected an object with a 'type'"),
+        (lambda: ValueObject.from_json('{"type": "Prob"}'), "Did you mean 'Probe'"),
+        (lambda: ValueObject.from_json('{"type": "Probe", "size": 1, "siz": 2}'), "Did you mean 'size'"),
     ],
 )
 def test_slips_are_named(make, message):

@@ -1,0 +1,247 @@
+"""The rays of a setup: traced once for every wavelength."""
+
+import functools
+import math
+
+import numpy as np
+import xarray as xr
+
+from branchlab.conventions import CAUSTIC, PARAXIAL, RAY, X, Y
+from branchlab.errors import check_integer, check_number, check_positive
+from branchlab.kernels.tubes import lay_tubes
+from branchlab.launch.part import FrontRays
+from branchlab.rays.caustics import caustic_points
+from branchlab.rays.front import TracedFront
+from branchlab.rays.march import Marcher, refuse_turned
+from branchlab.rays.table import STEPS_PER_SCALE
+from branchlab.results import dataset, provenance
+
+COARSE = 8.0  # cells of sagitta beyond which a tube is a straight thick line and its flux counts as unresolved
+THREADS = 2  # tubes are laid in this many chunks, whatever the machine: the sum does not depend on it
+
+
+class RayEnsemble:
+    """The rays that a source sends through the window of a setup; they know no wavelength.
+
+    Parameters
+    ----------
+    setup : Setup
+    rays_per_scale : float
+        Rays per medium scale on a launching front, to begin with.
+    most_rays : int
+        Where the refinement of a front stops; the flux of tubes that are still too coarse is reported.
+    steps_per_scale : int
+        Steps per medium scale, at least.
+
+    Notes
+    -----
+    Paraxial rays: dy/dx = p, dp/dx = -v_y/2. They are valid while |p| is well below 1, and refused beyond.
+    """
+
+    def __init__(
+        self, setup, *, rays_per_scale: float = 32.0, most_rays: int = 1 << 17, steps_per_scale: int = STEPS_PER_SCALE
+    ):
+        self.setup = setup
+        self.rays_per_scale = check_positive("rays_per_scale", rays_per_scale)
+        self.most_rays = check_integer("most_rays", most_rays, low=64)
+        self.steps_per_scale = check_integer("steps_per_scale", steps_per_scale, low=2)
+
+    def __repr__(self):
+        return f"RayEnsemble({self.setup!r}, rays_per_scale={self.rays_per_scale:g}, most_rays={self.most_rays})"
+
+    @functools.cached_property
+    def marcher(self) -> Marcher:
+        """Marches rays from screen to screen; shared with the sums over rays."""
+        return Marcher(self.setup, self.steps_per_scale)
+
+    @property
+    def first_rays(self) -> int:
+        """Rays on a front before it is refined."""
+        wanted = math.ceil(self.rays_per_scale * self.setup.width / self.setup.medium.scale)
+        return max(64, min(wanted, self.most_rays // 2))
+
+    def density(self, resolution: float | None = None) -> xr.Dataset:
+        """Return the density of rays: flux per cell on every screen.
+
+        Parameters
+        ----------
+        resolution : float, optional
+            The fronts are refined until no tube bends by more than half of this. Default: one cell.
+
+        Returns
+        -------
+        Dataset of kind "density"
+            intensity (x, y), the mean over a cell; flux, lost_flux (beyond open sides), unresolved_flux, rays_per_point
+            and numerical_error (x): the misplaced flux between this density and the one of half the rays with twice the
+            step, per cell, an upper bound for every coarser resolution.
+
+        Raises
+        ------
+        RangeError
+            v >= 1, or a ray that turns back.
+        ResourceError
+            The front does not fit into memory.
+        """
+        setup = self.setup
+        wanted = setup.cell if resolution is None else check_number("resolution", resolution, low=setup.cell)
+        coarser = Marcher(setup, max(1, self.steps_per_scale // 2))
+        laid = np.zeros((setup.x.size, setup.y.size))
+        rough = np.zeros_like(laid)
+        curves = np.zeros((3, setup.x.size))
+        for part in setup.parts():
+            front = TracedFront(part, self.marcher, self.first_rays, 0.5 * wanted, self.most_rays)
+            flux, outside, unresolved = self._laid(front)
+            laid += part.weight * flux
+            rough += part.weight * self._laid(front.halved(coarser))[0]
+            crossed = np.abs(np.diff(front.y, axis=1)).sum(axis=1) / setup.width
+            curves += part.weight * np.array([outside, unresolved, crossed])
+        sent = laid.sum(axis=1)
+        lost, unresolved, crossed = curves
+        there = np.where(sent > 0, sent, 1.0)
+        error = 0.5 * np.abs(laid / there[:, None] - rough / np.where(rough.sum(1) > 0, rough.sum(1), 1.0)[:, None])
+        variables = {
+            "intensity": ((X, Y), laid / setup.cell),
+            "flux": ((X,), sent),
+            "lost_flux": ((X,), lost),
+            "unresolved_flux": ((X,), unresolved),
+            "rays_per_point": ((X,), crossed),
+            "numerical_error": ((X,), error.sum(axis=1)),
+        }
+        return dataset("density", variables, self._axes(), provenance(setup, model=PARAXIAL))
+
+    def _laid(self, front: TracedFront):
+        """Return flux per cell (x, y), and flux outside and unresolved (x), of one front."""
+        setup, flux = self.setup, front.tube_flux
+        laid = np.empty((setup.x.size, setup.y.size))
+        outside, unresolved = np.empty(setup.x.size), np.empty(setup.x.size)
+        periodic = setup.sides == "periodic"
+        for i in range(setup.x.size):
+            laid[i], outside[i], unresolved[i] = lay_tubes(
+                front.y[i], front.slopes(i), flux, front.lap,
+                -0.5 * setup.width, setup.cell, setup.y.size, periodic, COARSE, THREADS,
+            )  # fmt: skip
+        return laid, outside, unresolved
+
+    def _axes(self) -> dict:
+        return {X: ((X,), self.setup.x), Y: ((Y,), self.setup.y)}
+
+    def _launched(self, rays: int | None):
+        """Return the rays of all parts in the middles of equal steps of s: FrontRays, part numbers, flux."""
+        count = self.first_rays if rays is None else check_integer("rays", rays, low=1)
+        fronts, numbers, flux = [], [], []
+        for number, part in enumerate(self.setup.parts()):
+            low, high = part.front.span
+            ds = (high - low) / count
+            front = part.front.at(low + (np.arange(count) + 0.5) * ds)
+            fronts.append(front)
+            numbers.append(np.full(count, number))
+            flux.append(part.weight * front.amplitude**2 * ds)
+        joined = FrontRays(*(np.concatenate(column) for column in zip(*fronts, strict=True)))
+        return joined, np.concatenate(numbers), np.concatenate(flux)
+
+    def trace(self, rays: int | None = None) -> xr.Dataset:
+        """Return every ray on every screen.
+
+        Parameters
+        ----------
+        rays : int, optional
+            Rays per coherent part, in the middles of equal steps of the front parameter s.
+
+        Returns
+        -------
+        Dataset of kind "trace", dimensions (x, ray)
+            position, momentum, action (carrier removed), maslov, status; the stability matrix dydy, dydp, dpdy, dpdp
+            = d(y, p)/d(y0, p0); dyds, dpds along the front; and by ray its s, part and ray_flux. Status: 0 ok, 1 left
+            the window's box, 2 turned too far, 3 lost (not finite).
+        """
+        launched, numbers, flux = self._launched(rays)
+        names = ("position", "momentum", "action", "dyds", "dpds", "maslov", "status")
+        found = {name: [] for name in (*names, "dydy", "dpdy", "dydp", "dpdp")}
+        walks = zip(self.marcher.march(launched), self.marcher.march(launched, matrix=True), strict=True)
+        for front, full in walks:
+            for name, row in zip(names, front[1:8], strict=True):
+                found[name].append(row)
+            for name, row in zip(("dydy", "dpdy", "dydp", "dpdp"), (full.A, full.C, full.B, full.D), strict=True):
+                found[name].append(row)
+        variables = {name: ((X, RAY), np.array(rows)) for name, rows in found.items()}
+        for name in ("maslov", "status"):
+            variables[name] = ((X, RAY), variables[name][1].astype(np.int64))
+        variables["ray_flux"] = ((RAY,), flux)
+        coords = {
+            X: ((X,), self.setup.x),
+            RAY: ((RAY,), np.arange(flux.size)),
+            "s": ((RAY,), launched.s),
+            "part": ((RAY,), numbers),
+        }
+        return dataset("trace", variables, coords, provenance(self.setup, model=PARAXIAL))
+
+    def caustics(self, rays: int | None = None) -> xr.Dataset:
+        """Return every caustic point: where dy/ds passes through 0 along a ray.
+
+        Parameters
+        ----------
+        rays : int, optional
+            Rays per coherent part.
+
+        Returns
+        -------
+        Dataset of kind "caustics"
+            first_caustic (ray): its range, nan if the ray meets none in the window; and over `caustic`: position
+            (caustic_x, caustic_y), momentum, ray and order of every point.
+        """
+        launched, numbers, _ = self._launched(rays)
+        steps = self.marcher.table.steps_per_screen * (self.setup.x.size - 1)
+        fine = Marcher(self.setup.with_(screens=steps + 1), self.steps_per_scale)
+        points = caustic_points(fine.march(launched))
+        first = np.full(launched.s.size, np.nan)
+        early = points.order == 1
+        first[points.ray[early]] = points.x[early]
+        variables = {
+            "first_caustic": ((RAY,), first),
+            "order": ((CAUSTIC,), points.order),
+            "caustic_x": ((CAUSTIC,), points.x),
+            "caustic_y": ((CAUSTIC,), points.y),
+            "momentum": ((CAUSTIC,), points.p),
+            "ray_number": ((CAUSTIC,), points.ray),
+        }
+        coords = {
+            RAY: ((RAY,), np.arange(first.size)),
+            CAUSTIC: ((CAUSTIC,), np.arange(points.x.size)),
+            "s": ((RAY,), launched.s),
+            "part": ((RAY,), numbers),
+        }
+        return dataset("caustics", variables, coords, provenance(self.setup, model=PARAXIAL))
+
+    def section(self, x: float, rays: int | None = None) -> xr.Dataset:
+        """Return the rays in phase space at one range.
+
+        Parameters
+        ----------
+        x : float
+            Range of the section, 0 <= x <= length; it need not be a screen.
+        rays : int, optional
+            Rays per coherent part.
+
+        Returns
+        -------
+        Dataset of kind "section", dimension ray
+            position, momentum, ray_flux, dyds, dpds, maslov, with s and part.
+        """
+        x = check_number("x", x, low=0.0, high=self.setup.length)
+        launched, numbers, flux = self._launched(rays)
+        reached = self.setup if x == 0 else self.setup.with_(length=x, screens=2)
+        for state in Marcher(reached, self.steps_per_scale).march(launched):
+            if state.x == x:
+                break
+        refuse_turned(state)
+        variables = {
+            "position": ((RAY,), state.y),
+            "momentum": ((RAY,), state.p),
+            "ray_flux": ((RAY,), flux),
+            "dyds": ((RAY,), state.A),
+            "dpds": ((RAY,), state.C),
+            "maslov": ((RAY,), state.maslov.astype(np.int64)),
+        }
+        coords = {RAY: ((RAY,), np.arange(flux.size)), "s": ((RAY,), launched.s), "part": ((RAY,), numbers)}
+        attrs = {**provenance(self.setup, model=PARAXIAL), "x": x}
+        return dataset("section", variables, coords, attrs)
