@@ -12,7 +12,7 @@ _OPTIONS = {"nogil": True, "cache": True, "error_model": "numpy", "fastmath": {"
 
 BATCH = 64  # packets whose coefficients are prepared together: a vectorised loop, 13 KB that stay in the L1 cache
 SHARES = 8  # partial sums, fixed so that the result does not depend on the number of threads
-FORGOTTEN = 1e-290  # packets below this are skipped, and with it those that are nan
+THINNEST = 32.0  # packets thinned by exp(-32) = 1e-14 or more are skipped
 
 
 @njit(**_OPTIONS)
@@ -33,10 +33,9 @@ def _prepare(first, count, y, p, path, turn, amplitude, stretch, k, gamma, start
         rate, phase = -decay * off * pitch, kp * pitch
         thin = k * look_up(stretch, i)
         thin *= thin
-        size = look_up(amplitude, i) * exponential(-0.5 * decay * off * off - rate * half - min(thin, 600.0))
-        keep = size > FORGOTTEN or size < -FORGOTTEN
-        size = size if keep else 0.0
+        size = look_up(amplitude, i) * exponential(-0.5 * decay * off * off - rate * half - min(thin, THINNEST))
         re, im = cos_sin(k * look_up(path, i) + look_up(turn, i) + kp * off - phase * half)
+        keep = thin < THINNEST and size == size and re == re  # not nan
         put(centre, t, nearest if keep else 0.0)
         put(c, t, size * re if keep else 0.0)
         put(c, BATCH + t, size * im if keep else 0.0)

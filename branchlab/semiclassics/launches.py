@@ -3,6 +3,7 @@
 import numpy as np
 
 from branchlab.launch.part import CoherentPart, FrontRays
+from branchlab.rays.march import OK, RayState
 from branchlab.semiclassics.branches import find_branches
 from branchlab.semiclassics.frozen import FrozenGaussians
 from branchlab.semiclassics.herman_kluk import HermanKluk, PhaseSpace
@@ -20,15 +21,15 @@ def launch_rays(part: CoherentPart, count: int) -> tuple[FrontRays, float]:
     return part.front.at(low + (np.arange(count) + 0.5) * ds), ds
 
 
-def manifold_on(part: CoherentPart, rays: FrontRays, ds: float, state) -> Manifold:
-    """Return the front of a part as it stands on a screen."""
-    y = np.ascontiguousarray(state.y, dtype=np.float64)
+def manifold_on(part: CoherentPart, rays: FrontRays, ds: float, state: RayState) -> Manifold:
+    """Return the front of a part as it stands on a screen; rays that are gone become nan."""
+    y = np.where(state.status == OK, state.y, np.nan)
     return Manifold(
         y,
         state.p - part.tilt,
         state.action - part.tilt * y,
-        np.ascontiguousarray(state.A),
-        np.ascontiguousarray(state.C),
+        state.A,
+        state.C,
         state.maslov,
         np.ascontiguousarray(rays.amplitude),
         ds,
@@ -58,7 +59,7 @@ class FrontLaunch:
         self.part, self.k, self.method, self.gamma, self.reach = part, k, method, gamma, reach
         self.rays, self.ds = launch_rays(part, count)
 
-    def on(self, state) -> "FrontScreen":
+    def on(self, state: RayState) -> "FrontScreen":
         """Return the sum on the screen of a ray state."""
         return FrontScreen(self, manifold_on(self.part, self.rays, self.ds, state))
 
@@ -128,8 +129,8 @@ class PhaseSpaceLaunch:
         rays, ds = launch_rays(part, 4096)
         self.sent = float(np.sum(rays.amplitude**2) * ds)
 
-    def on(self, state) -> HermanKluk:
+    def on(self, state: RayState) -> HermanKluk:
         """Return the sum on the screen of a ray state."""
-        y = np.ascontiguousarray(state.y)
+        y = np.where(state.status == OK, state.y, np.nan)
         p, action = state.p - self.part.tilt, state.action - self.part.tilt * y
         return HermanKluk(self.space, self.sent, y, p, action, (state.A, state.B, state.C, state.D), state.maslov)
