@@ -36,6 +36,7 @@ NAMES = {
     "field_error": ("1", "relative numerical error of the field"),
     "spectral_tail": ("1", "share of the spectrum near the end of the grid's"),
     "flux_excess": ("1", "flux of the sum over that of its rays, minus 1"),
+    "entry_error": ("1", "relative error with which the sum rebuilds the entry field"),
     "trusted": ("1", "the sum's own alarm is silent"),
     "rays_per_point": ("1", "mean number of rays through a point"),
     "position": ("L", "transverse position"),

@@ -1,1 +1,5 @@
 """Waves summed over rays."""
+
+from branchlab.semiclassics.sum import SemiclassicalSum
+
+__all__ = ["SemiclassicalSum"]

@@ -3,7 +3,7 @@
 import numpy as np
 
 from branchlab.launch.part import CoherentPart, FrontRays
-from branchlab.rays.march import OK, RayState
+from branchlab.rays.march import LEFT, NOT_FINITE, OK, RayState, refuse_turned
 from branchlab.semiclassics.branches import find_branches
 from branchlab.semiclassics.frozen import FrozenGaussians
 from branchlab.semiclassics.herman_kluk import HermanKluk, PhaseSpace
@@ -22,7 +22,14 @@ def launch_rays(part: CoherentPart, count: int) -> tuple[FrontRays, float]:
 
 
 def manifold_on(part: CoherentPart, rays: FrontRays, ds: float, state: RayState) -> Manifold:
-    """Return the front of a part as it stands on a screen; rays that are gone become nan."""
+    """Return the front of a part as it stands on a screen; rays that are gone become nan.
+
+    Raises
+    ------
+    RangeError
+        A ray turns back.
+    """
+    refuse_turned(state)
     y = np.where(state.status == OK, state.y, np.nan)
     return Manifold(
         y,
@@ -57,6 +64,7 @@ class FrontLaunch:
 
     def __init__(self, part: CoherentPart, k, method: str, gamma: float, reach: float, count: int):
         self.part, self.k, self.method, self.gamma, self.reach = part, k, method, gamma, reach
+        self.packets = method == "frozen-gaussian"
         self.rays, self.ds = launch_rays(part, count)
 
     def on(self, state: RayState) -> "FrontScreen":
@@ -120,7 +128,7 @@ class PhaseSpaceLaunch:
         See `PhaseSpace`.
     """
 
-    matrix = True
+    matrix = packets = True
 
     def __init__(self, part: CoherentPart, k, line: Line, gamma: float, reach: float, spacing: float):
         self.part, self.k = part, k
@@ -131,6 +139,8 @@ class PhaseSpaceLaunch:
 
     def on(self, state: RayState) -> HermanKluk:
         """Return the sum on the screen of a ray state."""
-        y = np.where(state.status == OK, state.y, np.nan)
+        # packets beyond |p| = 1 belong to the paraxial wave too, and carry next to nothing: they stay
+        gone = (state.status == LEFT) | (state.status == NOT_FINITE)
+        y = np.where(gone, np.nan, state.y)
         p, action = state.p - self.part.tilt, state.action - self.part.tilt * y
         return HermanKluk(self.space, self.sent, y, p, action, (state.A, state.B, state.C, state.D), state.maslov)

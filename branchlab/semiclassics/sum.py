@@ -7,8 +7,8 @@ import numpy as np
 from branchlab.conventions import PARAXIAL, WAVELENGTH, Y_FINE, X, Y, wavenumber
 from branchlab.errors import InputError, check_choice, check_integer, check_memory, check_number, check_positive
 from branchlab.launch.part import CoherentPart
-from branchlab.results.layout import dataset
-from branchlab.results.provenance import provenance
+from branchlab.rays import RayEnsemble
+from branchlab.results import dataset, provenance
 from branchlab.semiclassics.curvature import packet_curvature
 from branchlab.semiclassics.frozen import FrozenGaussians
 from branchlab.semiclassics.launches import FrontLaunch, PhaseSpaceLaunch, launch_rays, manifold_on
@@ -43,21 +43,21 @@ class SemiclassicalSum:
         Rays on the front. Default: as many as the shortest wavelength needs on the farthest screen, judged by a
         few thousand rays sent ahead; not used by "herman-kluk".
     spacing : float, optional
-        Step of the phase-space grid in packet units, for "herman-kluk". Default: 0.35/sqrt(growth), with the
-        typical growth of the stability matrix over the window (rays sent ahead), within 0.02 ... 0.35.
+        Step of the phase-space grid in packet units, for "herman-kluk". Default: 0.3/sqrt(growth), with the
+        typical growth of the stability matrix over the window (rays sent ahead), within 0.02 ... 0.3.
     tolerance : float
         Packets are cut where they are below this share of their height.
 
     Notes
     -----
     A sum over rays is not unitary. Every screen's intensity is divided by the sum's flux and multiplied by that
-    of its rays; `flux_excess` says by how much they differed, and `trusted` whether that and the flux on
-    unresolved rays are within `trust.FLUX_EXCESS_LIMIT` and `trust.UNRESOLVED_LIMIT`.
+    of its rays; `flux_excess` says by how much they differed, and `trusted` whether that, the flux on unresolved
+    rays and the error of the rebuilt entry field are within the limits of `branchlab.semiclassics.trust`.
     """
 
     def __init__(
         self,
-        rays,
+        rays: RayEnsemble,
         method: str = "frozen-gaussian",
         *,
         packet_curvature: float | None = None,
@@ -65,6 +65,8 @@ class SemiclassicalSum:
         spacing: float | None = None,
         tolerance: float = 1e-6,
     ):
+        if not isinstance(rays, RayEnsemble):
+            raise InputError(f"rays must be a RayEnsemble; got {type(rays).__name__}. Use RayEnsemble(setup).")
         self.rays = rays
         self.setup = rays.setup
         self.method = check_choice("method", method, METHODS)
@@ -93,7 +95,8 @@ class SemiclassicalSum:
         -------
         Dataset of kind "semiclassical"
             intensity (wavelength, x, y): mean over a cell, incoherent parts added, flux-normalised per screen;
-            flux_excess, unresolved_flux and trusted (wavelength, x); psi (wavelength, x, y_fine) on request.
+            flux_excess, unresolved_flux and trusted (wavelength, x); entry_error (wavelength), nan for methods
+            without packets; psi (wavelength, x, y_fine) on request.
 
         Raises
         ------
@@ -120,6 +123,7 @@ class SemiclassicalSum:
         )
         intensity = np.zeros((*shape, setup.y.size))
         sent, unresolved = np.zeros(shape), np.zeros(shape)
+        entry = np.zeros(k.size)  # squared
         psi = np.zeros((*shape, lines[0].n), dtype=np.complex128) if fields else None
         launches = list(self._launches(parts, k, lines[0], gamma))
         for done, (launch, part, which) in enumerate(launches):
@@ -130,6 +134,10 @@ class SemiclassicalSum:
                     intensity[w, i] += part.weight * self._cells(field)
                     sent[w, i] += part.weight * screen.flux(0.5 * setup.width)
                     unresolved[w, i] += part.weight * screen.unresolved(j, lines[w])
+                    if i == 0 and launch.packets:
+                        given = part.entry(lines[w].points, k[w : w + 1])[0]
+                        apart = np.sum(np.abs(field - given) ** 2) / max(np.sum(np.abs(given) ** 2), 1e-300)
+                        entry[w] += part.weight * apart
                     if fields:
                         psi[w, i] = field * np.exp(1j * k[w] * part.tilt * lines[w].points)
                 if progress:
@@ -137,11 +145,14 @@ class SemiclassicalSum:
         found = intensity.sum(axis=-1) * setup.cell
         nothing = (found <= 0.0) | (sent <= 0.0)
         ratio = np.where(nothing, 1.0, found / np.where(nothing, 1.0, sent))
+        rebuilt = np.sqrt(entry) if launches[0][0].packets else np.full(k.size, np.nan)
+        safe = trusted(ratio - 1.0, unresolved / np.where(nothing, 1.0, sent), rebuilt[:, None])
         variables = {
             "intensity": ((WAVELENGTH, X, Y), intensity / ratio[..., None]),
             "flux_excess": ((WAVELENGTH, X), ratio - 1.0),
             "unresolved_flux": ((WAVELENGTH, X), unresolved),
-            "trusted": ((WAVELENGTH, X), trusted(ratio - 1.0, unresolved / np.where(nothing, 1.0, sent))),
+            "entry_error": ((WAVELENGTH,), rebuilt),
+            "trusted": ((WAVELENGTH, X), safe),
         }
         coords = {WAVELENGTH: ((WAVELENGTH,), wavelengths), X: ((X,), setup.x), Y: ((Y,), setup.y)}
         if fields:
@@ -209,7 +220,7 @@ class SemiclassicalSum:
             pass
         norm = np.sqrt(0.5 * (state.A**2 + state.D**2 + (gamma * state.B) ** 2 + (state.C / gamma) ** 2))
         growth = np.nanmedian(norm) if np.isfinite(norm).any() else 1.0
-        return float(np.clip(0.35 / math.sqrt(growth), 0.02, 0.35))
+        return float(np.clip(0.3 / math.sqrt(growth), 0.02, 0.3))
 
 
 def _optional(check, name: str, value):
