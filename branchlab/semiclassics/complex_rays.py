@@ -4,7 +4,7 @@ import numpy as np
 
 from branchlab.semiclassics.manifold import Manifold
 
-FARTHEST = 3.0
+FARTHEST = 4.3
 """How far the front is continued, in units of the distance of the outermost ray used."""
 
 
@@ -13,7 +13,7 @@ class ComplexRays:
 
     y and p are polynomials of degree 11 in the front parameter (values and tangents of the rays), the amplitude
     one of degree 5. The outermost rays are as far from the fold as the complex rays are where the Airy argument
-    is 1, but not beyond the neighbouring folds.
+    is 1/2, but not beyond the neighbouring folds.
 
     Parameters
     ----------
@@ -38,11 +38,12 @@ class ComplexRays:
         self.plain = 2.0 * self.amplitude * (0.5 * k * np.abs(self.turn) * bend) ** (1.0 / 6.0) / np.sqrt(bend)
         rays, i = m.y.size, np.floor(at).astype(np.int64)
         gap = np.diff(at, prepend=-np.inf, append=np.inf)
-        far = np.sqrt(2.0 * self.width / bend) / m.ds
+        far = np.sqrt(self.width / bend) / m.ds
         far = np.minimum(far, np.minimum(gap[:-1], gap[1:]))
         far = np.clip(np.rint(far), 2, max(rays // 8, 2)).astype(np.int64)
-        near = (far + 1) // 2
-        nodes = np.stack([i - far, i - near, i, i + 1, i + 1 + near, i + 1 + far])
+        # evenly spread: two neighbouring rays among distant ones would spoil the polynomial by round-off
+        off = np.rint(far * np.array([[0.2], [0.6], [1.0]])).astype(np.int64)
+        nodes = np.concatenate([(i - off)[::-1], i + 1 + off])
         if m.lap == 0.0:
             nodes += np.maximum(-nodes[0], 0) - np.maximum(nodes[-1] - rays + 1, 0)
         lap, wrapped = np.divmod(nodes, rays)
@@ -57,7 +58,7 @@ class ComplexRays:
         size = np.linalg.solve(powers[..., :6].transpose(1, 0, 2), m.amplitude[wrapped].T[..., None])
         self.y, self.size = both[:, :, 0].T, size[:, :, 0].T
         self.dy = self.y[1:] * np.arange(1, 12)[:, None]
-        self.dS = _product(both[:, :, 1].T, self.dy)  # of the action beyond that of the fold's own direction
+        self.dS = _product(both[:, :, 1].T, self.dy)  # of the action beyond that of the fold's direction
 
     def beyond(self, fold, offset):
         """Return what the uniform form needs at y = place + offset on the dark side.

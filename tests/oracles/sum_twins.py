@@ -5,6 +5,9 @@ from typing import NamedTuple
 import numpy as np
 from scipy.interpolate import CubicHermiteSpline
 from scipy.optimize import brentq
+from scipy.special import jv
+
+from branchlab.semiclassics.manifold import Manifold
 
 
 class Rays(NamedTuple):
@@ -68,3 +71,53 @@ def duct(q, p, a, x, *, tangent=(1.0, 0.0)):
     along = tangent[0] * np.cos(a * grid) + tangent[1] * np.sin(a * grid) / a
     crossings = np.count_nonzero(along[1:] * along[:-1] < 0)
     return Rays(yx, px, action, c * one, s / a * one, -a * s * one, c * one, crossings * one)
+
+
+def manifold(rays: Rays, s, bend, amplitude, ds, *, path=0.0, phase=0.0):
+    """Return a Manifold of rays that left y = s with dp/ds = bend."""
+    A, C = rays.A + bend * rays.B, rays.C + bend * rays.D
+    return Manifold(rays.y, rays.p, rays.action + path, A, C, rays.maslov, amplitude, ds, 0.0, phase)
+
+
+def sinusoidal_screen(ph0, X, tau):
+    """Return the exact field behind the thin screen exp(i ph0 cos X), q = 1, at tau = ph0 z/k.
+
+    psi = sum_n i**n J_n(ph0) exp(i n X - i n**2 z/2k): Raman & Nath 1935; Goodman, Introduction to Fourier Optics.
+    """
+    top = int(ph0 + 60 + 10 * ph0 ** (1 / 3))
+    n = np.arange(-top, top + 1)
+    return np.sum(1j ** (n % 4) * jv(n, ph0) * np.exp(1j * n * X - 0.5j * n**2 * tau / ph0))
+
+
+def sinusoidal_front(tau, count, shift=0.0):
+    """Return the rays behind that screen at unit distance: path tau cos(s - shift)."""
+    ds = 2 * np.pi / count
+    s = -np.pi + (np.arange(count) + 0.5) * ds
+    c, p = np.cos(s - shift), -tau * np.sin(s - shift)
+    A = 1 - tau * c
+    return Manifold(s + p, p, tau * c + 0.5 * p * p, A, -tau * c, (A < 0) * 1.0, np.ones(count), ds, 2 * np.pi)
+
+
+def caustic_circle(m, reach, count):
+    """Return the rays tangent to the circle of radius m (k = 1), where they cross the line x = 0, y > 0.
+
+    They run counterclockwise: the ray that touches the circle at the angle phi crosses at y = m/sin(phi); its
+    parameter is u = cot(phi), abs(u) <= reach, and it has its caustic at u = 0. The field they make up is
+    J_m(r) exp(i m phi) on that line, phi = pi/2: both branches have the flux 1/(2 pi) of Debye's two rays.
+    """
+    ds = 2 * reach / count
+    u = -reach + (np.arange(count) + 0.5) * ds
+    sine = 1 / np.sqrt(1 + u * u)
+    action = m * (np.arctan2(1, u) + u)  # angular momentum m round the circle, then straight on
+    return Manifold(
+        m / sine,
+        u * sine,
+        action,
+        m * u * sine,
+        sine**3,
+        (u > 0) * 1.0,
+        np.sqrt(sine / (2 * np.pi)),
+        ds,
+        0.0,
+        np.pi / 4,
+    )
