@@ -64,6 +64,7 @@ class PhaseSpace:
 
     def __init__(self, part: CoherentPart, line: Line, k, gamma: float, spacing: float, reach: float):
         self.k, self.gamma, self.spacing, self.reach = np.asarray(k, dtype=np.float64), gamma, spacing, reach
+        self.periodic = line.periodic
         low, high = self.k.min(), self.k.max()
         span = line.pitch * line.n
         columns = int(np.ceil(span * np.sqrt(high * gamma) / spacing))
@@ -170,7 +171,8 @@ class HermanKluk:
 
     def flux(self, half_width: float) -> float:
         """Return the flux of the packets at abs(y) <= half_width."""
-        return self.sent * float(self.space.share[np.abs(self.y) <= half_width].sum())
+        share = self.space.share if self.space.periodic else self.space.share[np.abs(self.y) <= half_width]
+        return self.sent * float(share.sum())
 
     def unresolved(self, which: int, line: Line) -> float:  # noqa: ARG002  (the grid follows the wavelength)
         """Return the flux of packets whose neighbours have parted by more than `PARTED`."""

@@ -4,7 +4,7 @@ import math
 
 import numpy as np
 
-from branchlab.conventions import PARAXIAL, WAVELENGTH, Y_FINE, X, Y, wavenumber
+from branchlab.conventions import CARRIER, PARAXIAL, WAVELENGTH, Y_FINE, X, Y, wavenumber
 from branchlab.errors import InputError, check_choice, check_integer, check_memory, check_number, check_positive
 from branchlab.launch.part import CoherentPart
 from branchlab.rays import RayEnsemble
@@ -20,6 +20,7 @@ FEWEST_RAYS, MOST_RAYS = 2048, 1 << 18
 THINNED = 0.005  # share of the flux that may be thinned out before the front gets more rays
 SHARED = 1.5  # wavenumbers that differ by no more than this factor share one phase-space grid
 PILOT_RAYS = 512
+GRID_SHARE = 0.6  # the largest angle of the rays is at this share of the grid's, so that intensities are resolved too
 
 
 class SemiclassicalSum:
@@ -158,7 +159,8 @@ class SemiclassicalSum:
         if fields:
             variables["psi"] = ((WAVELENGTH, X, Y_FINE), psi)
             coords[Y_FINE] = ((Y_FINE,), lines[0].points)
-        attrs = {"method": self.method, "packet_curvature": gamma, **provenance(setup, model=PARAXIAL)}
+        attrs = {"method": self.method, "packet_curvature": gamma, "carrier": CARRIER}
+        attrs |= provenance(setup, model=PARAXIAL)
         return dataset("semiclassical", variables, coords, attrs)
 
     @property
@@ -168,7 +170,7 @@ class SemiclassicalSum:
 
     def _lines(self, k, gamma: float, *, common: bool) -> list[Line]:
         """Return the transverse grid of each wavenumber."""
-        window, angle = self.setup.window, self.setup.angle_bound()
+        window, angle = self.setup.window, self.setup.angle_bound() / GRID_SHARE
         # a packet narrower than a third of the pitch would overflow its recurrence and could miss every point
         points = [self.setup.fine_points(one, max(angle, 0.5 * math.sqrt(gamma / one))) for one in k]
         if common:

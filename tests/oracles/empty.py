@@ -19,11 +19,11 @@ class Empty(Medium):
 
 @value
 class Bowl(Medium):
-    """v = (0.1 y)**2: a duct whose flat front meets at x = 5 pi."""
+    """v = (0.08 y)**2: a duct whose flat front meets at x = pi/0.16."""
 
     scale = 1.0
 
     def rows(self, x, y, *, dx=0, dy=0):
         y = check_axis("y", y)
-        row = (0.01 * y**2, 0.02 * y, np.full_like(y, 0.02))[dy]
+        row = (0.0064 * y**2, 0.0128 * y, np.full_like(y, 0.0128))[dy]
         return np.tile(0 * row if dx else row, (check_axis("x", x).size, 1))
