@@ -4,11 +4,22 @@ import numpy as np
 
 from branchlab.launch import AngularSpread, Beam, FieldSource, PlaneWave, PointSource, Setup
 from branchlab.launch.sources import Source
-from branchlab.media import RandomMedium
+from branchlab.media import BumpMedium, Duct, Lens, Ramp, RandomMedium, SampledMedium
 from branchlab.media.base import Medium
 
+_GRID = np.linspace(-12.0, 12.0, 97)
 MEDIA = [
     RandomMedium(0.08, 1.0, seed=7),
+    RandomMedium(0.05, 1.0, 3, "matern", smoothness=3.0, box=(32.0, 32.0)),
+    RandomMedium(0.05, 2.0, 4, "power-law", exponent=3.0, inner_scale=0.5, box=(32.0, 32.0)),
+    RandomMedium(0.05, 0.8, 5, "donor-layer"),
+    BumpMedium(0.06, 0.7, 0.5, seed=2),
+    Duct(0.08),
+    Duct(0.1, y=0.5, profile="sech"),
+    Lens(0.2, 1.5, x=3.0, y=-1.0),
+    Ramp(slope_x=0.002, slope_y=-0.01),
+    SampledMedium(0.05 * np.outer(np.cos(0.7 * _GRID), np.sin(0.9 * _GRID + 0.3)), _GRID, _GRID),
+    Lens(0.1, 1.0, x=2.0) + RandomMedium(0.05, 1.0, seed=8),
 ]
 
 _Y = np.linspace(-8.0, 8.0, 129)

@@ -96,12 +96,12 @@ class Setup(ValueObject):
                 f"{self.sides} sides the window needs {low:g} <= y <= {high:g} (width and a fade of "
                 f"{self.window.fade:g}). Use width <= {fit:.4g}, or shift the medium's y axis to be centred on 0."
             )
-        period = getattr(self.medium, "period", None)
-        if period is not None and (self.length > period[0] * (1 + 1e-9) or self.width > period[1] * (1 + 1e-9)):
+        box = self.medium.repeats_after
+        if self.length > box[0] * (1 + 1e-9) or self.width > box[1] * (1 + 1e-9):
             raise InputError(
                 f"a window of {self.length:g} x {self.width:g} is larger than the random medium's super-box of "
-                f"{period[0]:g} x {period[1]:g}, after which the medium repeats itself. Use "
-                f"box=({max(self.length, period[0]):g}, {max(self.width, period[1]):g}) in the medium."
+                f"{box[0]:g} x {box[1]:g}, after which the medium repeats itself. Use "
+                f"box=({max(self.length, box[0]):g}, {max(self.width, box[1]):g}) in the medium."
             )
         self.parts()  # refuses a source that does not fit the window
 

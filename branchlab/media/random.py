@@ -1,35 +1,32 @@
 """A random medium as a table of Fourier modes whose amplitudes are a pure function of seed and mode number."""
 
 import functools
+import warnings
 
 import attrs
 import numpy as np
 
-from branchlab.errors import InputError, check_axis, check_choice, check_integer, check_number, check_positive
+from branchlab.errors import (
+    BranchlabWarning,
+    InputError,
+    check_axis,
+    check_choice,
+    check_integer,
+    check_memory,
+    check_number,
+    check_positive,
+)
+from branchlab.media import spectra
 from branchlab.media.base import Medium
+from branchlab.media.hashing import complex_normal
 from branchlab.values import value
 
-FAMILIES = ("gaussian",)
+FAMILIES = ("gaussian", "matern", "power-law", "exponential", "donor-layer")
+RESOLVED = 12.0  # a grid of scale/8 resolves wavenumbers up to RESOLVED/scale: scale = RESOLVED/cut
 
 
-def _splitmix(x):
-    """Mix 64-bit integers (Steele, Lea & Flood, OOPSLA 2014, the SplitMix64 finaliser)."""
-    x = x + np.uint64(0x9E3779B97F4A7C15)
-    x = (x ^ (x >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
-    x = (x ^ (x >> np.uint64(27))) * np.uint64(0x94D049BB133111EB)
-    return x ^ (x >> np.uint64(31))
-
-
-def mode_amplitude(seed: int, m, n):
-    """Return unit complex normal numbers (E|z|**2 = 1) for integer modes: a pure function of (seed, m, n)."""
-    with np.errstate(over="ignore"):
-        start = _splitmix(np.uint64(seed) ^ np.uint64(0x6A09E667F3BCC909))
-        mixed = _splitmix(start ^ (np.asarray(m, np.int64).astype(np.uint64) * np.uint64(0x9E3779B97F4A7C15)))
-        first = _splitmix(mixed ^ (np.asarray(n, np.int64).astype(np.uint64) * np.uint64(0xC2B2AE3D27D4EB4F)))
-        second = _splitmix(first)
-    radius = ((first >> np.uint64(11)).astype(np.float64) + 0.5) / 2.0**53
-    turn = (second >> np.uint64(11)).astype(np.float64) / 2.0**53
-    return np.sqrt(-np.log(radius)) * np.exp(2j * np.pi * turn)
+def _optional_positive(name):
+    return lambda s: s if s is None else check_positive(name, s)
 
 
 @value
@@ -45,22 +42,56 @@ class RandomMedium(Medium):
     strength : float
         Ensemble rms of v (that of one realisation differs by some percent: `statistics` reports it).
     correlation_length : float
-        The length l in the family's formula; gaussian: C(r) = strength**2 exp(-r**2/l**2).
+        The length l in the family's formula; see Notes.
     seed : int
         Number of the realisation, 0 ... 2**63 - 1.
-    family : {"gaussian"}
-        Shape of the correlation.
+    family : {"gaussian", "matern", "power-law", "exponential", "donor-layer"}
+        Shape of the spectrum.
+    smoothness : float, optional
+        nu of "matern". Default 5/2; rays have no limit for nu <= 3/2.
+    exponent : float, optional
+        Of "power-law": S ~ q**(-exponent) between outer and inner scale. Default 8/3.
+    inner_scale : float, optional
+        Of "power-law": the spectrum ends with exp(-q**2 inner_scale**2/4). Default correlation_length/10.
     box : (float, float), optional
-        Lengths (Bx, By) of the super-box, after which the medium repeats. Default 128 by 64 correlation lengths.
+        Lengths (Bx, By) of the super-box, after which the medium repeats. Default 128 by 64 correlation lengths
+        (64 by 32 for "power-law").
+
+    Notes
+    -----
+    C(r)/strength**2 of the families: gaussian exp(-r**2/l**2); matern 2**(1-nu)/Gamma(nu) (r/l)**nu K_nu(r/l);
+    exponential exp(-r/l); donor-layer (1 + r**2/(4 l**2))**(-3/2), white charges at the distance l, whose potential
+    is filtered by exp(-q l); power-law S(q) ~ (1 + q**2 l**2)**(-exponent/2) exp(-q**2 inner_scale**2/4), l the
+    outer scale.
+
+    Warns
+    -----
+    BranchlabWarning
+        The family has no ray limit: D = A''''(0) is infinite, and what rays find depends on the cut-off.
     """
 
     strength: float = attrs.field(converter=lambda s: check_positive("strength", s))
     correlation_length: float = attrs.field(converter=lambda s: check_positive("correlation_length", s))
     seed: int = attrs.field(converter=lambda s: check_integer("seed", s, low=0))
     family: str = attrs.field(default="gaussian", converter=lambda s: check_choice("family", s, FAMILIES))
+    smoothness: float | None = attrs.field(default=None, kw_only=True, converter=_optional_positive("smoothness"))
+    exponent: float | None = attrs.field(default=None, kw_only=True, converter=_optional_positive("exponent"))
+    inner_scale: float | None = attrs.field(default=None, kw_only=True, converter=_optional_positive("inner_scale"))
     box: tuple[float, float] | None = attrs.field(default=None, kw_only=True)
 
     def __attrs_post_init__(self):
+        homes = {"smoothness": "matern", "exponent": "power-law", "inner_scale": "power-law"}
+        for name, family in homes.items():
+            if getattr(self, name) is not None and self.family != family:
+                raise InputError(
+                    f"{name} belongs to the family {family!r}; the family is {self.family!r}. Leave {name} out, or use "
+                    f"family={family!r}."
+                )
+        if self.inner_scale is not None and self.inner_scale >= self.correlation_length:
+            raise InputError(
+                f"inner_scale must be below the outer scale, correlation_length = {self.correlation_length:g}; got "
+                f"{self.inner_scale:g}."
+            )
         if self.box is not None:
             try:
                 lengths = tuple(self.box)
@@ -72,40 +103,75 @@ class RandomMedium(Medium):
                 check_number(f"box[{i}]", b, low=4 * self.correlation_length) for i, b in enumerate(lengths)
             )
             object.__setattr__(self, "box", lengths)
+        if not self.spectrum.limit:
+            warnings.warn(
+                f"the rays of family {self.family!r} have no limit: the curvature noise D is infinite, and caustics depend "
+                f"on the shortest structure kept ({2 * np.pi / self.spectrum.cut:.3g}).",
+                BranchlabWarning,
+                stacklevel=4,
+            )
+
+    @functools.cached_property
+    def spectrum(self) -> spectra.Spectrum:
+        """The spectrum of the family."""
+        length = self.correlation_length
+        if self.family == "matern":
+            return spectra.MaternSpectrum(length, 2.5 if self.smoothness is None else self.smoothness)
+        if self.family == "power-law":
+            inner = 0.1 * length if self.inner_scale is None else self.inner_scale
+            return spectra.PowerLawSpectrum(length, 8.0 / 3.0 if self.exponent is None else self.exponent, inner)
+        kinds = {
+            "gaussian": spectra.GaussianSpectrum,
+            "exponential": spectra.ExponentialSpectrum,
+            "donor-layer": spectra.DonorLayerSpectrum,
+        }
+        return kinds[self.family](length)
 
     @property
     def scale(self) -> float:
-        """The correlation length."""
-        return self.correlation_length
+        """The correlation length of a gaussian medium; less where the spectrum reaches further."""
+        return RESOLVED / self.spectrum.cut
 
     @property
-    def period(self) -> tuple[float, float]:
+    def repeats_after(self) -> tuple[float, float]:
         """Lengths (Bx, By) of the super-box."""
-        return self.box or (128.0 * self.correlation_length, 64.0 * self.correlation_length)
+        share = 0.5 if self.family == "power-law" else 1.0
+        return self.box or (128.0 * share * self.correlation_length, 64.0 * share * self.correlation_length)
 
     @property
     def period_y(self) -> float:
         """Exact transverse period: the width of the super-box."""
-        return self.period[1]
+        return self.repeats_after[1]
 
-    def _spectrum(self, q):
-        """S(q), normalised to int S d2q/(2 pi)**2 = 1, and the wavenumber beyond which it is dropped."""
-        length = self.correlation_length
-        return np.pi * length**2 * np.exp(-((q * length) ** 2) / 4.0)
+    def with_seed(self, seed: int) -> "RandomMedium":
+        """Return another realisation."""
+        return self.with_(seed=seed)
 
     @functools.cached_property
     def _table(self):
         """Wavenumbers qx (M,), qy (N,) and complex amplitudes A (M, N)."""
-        bx, by = self.period
-        cut = 12.0 / self.correlation_length  # drops exp(-36) of the variance
-        m = np.arange(-int(cut * bx / (2 * np.pi)), int(cut * bx / (2 * np.pi)) + 1)
-        n = np.arange(0, int(cut * by / (2 * np.pi)) + 1)
+        bx, by = self.repeats_after
+        cut = self.spectrum.cut
+        top_x, top_y = int(cut * bx / (2 * np.pi)), int(cut * by / (2 * np.pi))
+        check_memory(
+            80.0 * (2 * top_x + 1) * (top_y + 1),
+            f"the medium's table of {2 * top_x + 1} x {top_y + 1} modes",
+            "Use a smaller box, or a family whose spectrum ends earlier.",
+        )
+        m, n = np.arange(-top_x, top_x + 1), np.arange(0, top_y + 1)
         qx, qy = 2 * np.pi * m / bx, 2 * np.pi * n / by
         q = np.hypot(qx[:, None], qy[None, :])
         kept = (q <= cut) & ((n[None, :] > 0) | (m[:, None] > 0))
-        zero_mode = self._spectrum(0.0) / (bx * by)  # left out, so that v has no mean: its share is given back
-        variance = np.where(kept, 4.0 * self.strength**2 * self._spectrum(q) / (bx * by * (1.0 - zero_mode)), 0.0)
-        return qx, qy, np.sqrt(variance) * mode_amplitude(self.seed, m[:, None], n[None, :])
+        share = np.where(kept, self.spectrum.density(q), 0.0)
+        # the mean is left out and the box makes of the integral over q a sum: the variance is made exact
+        share *= 4.0 * self.strength**2 / (2.0 * share.sum())
+        return qx, qy, np.sqrt(share) * complex_normal(self.seed, m[:, None], n[None, :])
+
+    @property
+    def realised_rms(self) -> float:
+        """Rms of v over the super-box in this realisation."""
+        amplitude = self._table[2]
+        return float(np.sqrt(0.5 * np.sum(amplitude.real**2 + amplitude.imag**2)))
 
     def rows(self, x, y, *, dx: int = 0, dy: int = 0) -> np.ndarray:
         """Return v, or a derivative of it, on the product grid (see `Medium.rows`); exact mode sums."""
