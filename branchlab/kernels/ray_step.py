@@ -117,33 +117,6 @@ def _march_block(state, begin, table, cells, start, inverse, step, first, last):
 
 
 @njit(**_OPTIONS)
-def march_serial(state, table, cells, start, inverse, step, first, last):
-    """Take the kicks first ... last - 1, each in the middle of a step; `state` is changed in place.
-
-    Parameters
-    ----------
-    state : ndarray, shape (FRONT_ROWS or MATRIX_ROWS, multiple of BLOCK)
-    table : ndarray, shape (kicks * cells * CELL,)
-        Spline cells of the kicks' potentials.
-    cells : int
-        Cells of a row, a power of 2.
-    start, inverse : float
-        Position of cell 0 and one over the pitch.
-    step : float
-    first, last : int
-    """
-    for block in range(state.shape[1] // BLOCK):
-        _march_block(state, block * BLOCK, table, cells, start, inverse, step, first, last)
-
-
-@njit(parallel=True, **_OPTIONS)
-def march_parallel(state, table, cells, start, inverse, step, first, last):
-    """Do what `march_serial` does, on all threads."""
-    for block in prange(state.shape[1] // BLOCK):
-        _march_block(state, block * BLOCK, table, cells, start, inverse, step, first, last)
-
-
-@njit(**_OPTIONS)
 def _spline(table, base, y, start, inverse, mask):
     """Return W, W', W'', W''' of the spline row that begins at `base`."""
     u = (y - start) * inverse
@@ -206,27 +179,75 @@ def _from_true_ray(state, i, potential, gradient, start, inverse, mask, strength
     state[2, i] += strength * value
 
 
-@njit(parallel=True, **_OPTIONS)
-def to_true(state, potential, gradient, cells, start, inverse, strength):
-    """Turn coordinates of the kernel map into true ones, in place.
+@njit(**_OPTIONS)
+def _settle_ray(true, i):
+    """Make the Maslov index agree with the sign of the true A.
 
-    The flow of G = c (W_x + p W_y), c = strength = step**2/24: a kick by c W_x, then the lift of y -> y + c W_y.
+    It is counted on the kernel map, whose caustics lie O(step**2) from the true ones; behind a caustic A and C have one
+    sign, before it they have opposite signs.
+    """
+    a = true[3, i]
+    even = np.floor(0.5 * true[5, i]) * 2.0 == true[5, i]
+    if (a < 0.0 and even) or (a > 0.0 and not even):
+        true[5, i] += 1.0 if a * true[4, i] > 0.0 else -1.0
+
+
+@njit(parallel=True, **_OPTIONS)
+def march_screens(state, true, kicks, potential, gradient, cells, start, inverse, step, strength, steps, first):
+    """March from screen `first` over the next ones, and give the true coordinates on each.
+
+    Every block of rays goes through all screens while it is in the cache.
+
+    Parameters
+    ----------
+    state : ndarray, shape (rows, ray)
+        Coordinates of the kernel map, changed in place.
+    true : ndarray, shape (screens, rows, ray)
+        Set to the true coordinates on the screens first + 1, first + 2, ...
+    kicks : ndarray, shape (kicks * cells * CELL,)
+        Spline cells of the kicks' potentials.
+    potential, gradient : ndarray, shape (all screens, cells * CELL)
+        Spline rows of W and W_x at the screens.
+    cells : int
+        Cells of a row, a power of 2.
+    start, inverse : float
+        Position of cell 0 and one over the pitch.
+    step : float
+    strength : float
+        Of the processor, step**2/24.
+    steps : int
+        Steps per screen.
+    first : int
+    """
+    rows = state.shape[0]
+    for block in prange(state.shape[1] // BLOCK):
+        begin = block * BLOCK
+        for n in range(true.shape[0]):
+            screen = first + n
+            _march_block(state, begin, kicks, cells, start, inverse, step, screen * steps, (screen + 1) * steps)
+            seen = true[n]
+            for row in range(rows):
+                for i in range(begin, begin + BLOCK):
+                    seen[row, i] = state[row, i]
+            for i in range(begin, begin + BLOCK):
+                _to_true_ray(seen, i, potential[screen + 1], gradient[screen + 1], start, inverse, cells - 1, strength)
+                _settle_ray(seen, i)
+
+
+@njit(parallel=True, **_OPTIONS)
+def from_true(state, potential, gradient, cells, start, inverse, strength):
+    """Turn true coordinates into those of the kernel map, in place.
+
+    The inverse, to round-off, of what `march_screens` does on a screen: the flow of G = c (W_x + p W_y),
+    c = strength = step**2/24, as a kick by c W_x and then the lift of y -> y + c W_y.
 
     Parameters
     ----------
     state : ndarray, shape (FRONT_ROWS or MATRIX_ROWS, ray)
     potential, gradient : ndarray, shape (cells * CELL,)
         One spline row of W and one of W_x, at the screen.
-    cells, start, inverse :
-        As for `march_serial`.
-    strength : float
+    cells, start, inverse, strength :
+        As for `march_screens`.
     """
-    for i in prange(state.shape[1]):
-        _to_true_ray(state, i, potential, gradient, start, inverse, cells - 1, strength)
-
-
-@njit(parallel=True, **_OPTIONS)
-def from_true(state, potential, gradient, cells, start, inverse, strength):
-    """Undo `to_true`, in place, to round-off."""
     for i in prange(state.shape[1]):
         _from_true_ray(state, i, potential, gradient, start, inverse, cells - 1, strength)

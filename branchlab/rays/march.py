@@ -7,12 +7,13 @@ from typing import NamedTuple
 import numpy as np
 
 from branchlab.errors import RangeError
-from branchlab.kernels.ray_step import BLOCK, FRONT_ROWS, MATRIX_ROWS, from_true, march_parallel, to_true
+from branchlab.kernels.ray_step import BLOCK, FRONT_ROWS, MATRIX_ROWS, from_true, march_screens
 from branchlab.launch.part import FrontRays
 from branchlab.rays.table import STEPS_PER_SCALE, KickTable
 
 OK, LEFT, TURNED, NOT_FINITE = 0, 1, 2, 3
 STATUS = {OK: "ok", LEFT: "left the window's box", TURNED: "turned too far for a paraxial ray", NOT_FINITE: "lost"}
+SCREENS_BYTES = 1 << 26  # rays are kept on this many bytes of screens before they are handed out
 STEEPEST = 1.0  # |p| is the sine of the angle to x: beyond this a ray has turned back
 
 
@@ -99,13 +100,13 @@ class Marcher:
         status = np.zeros(count, dtype=np.int8)
         yield self._given(state, 0, count, status)
         from_true(state, table.potential[0], table.gradient[0], *box, table.strength)
-        for screen in range(1, self.setup.x.size):
-            last = screen * table.steps_per_screen
-            march_parallel(state, table.flat, *box, table.step, last - table.steps_per_screen, last)
-            true = state.copy()
-            to_true(true, table.potential[screen], table.gradient[screen], *box, table.strength)
-            self._settle(true)
-            yield self._given(true, screen, count, status)
+        together = max(1, SCREENS_BYTES // state.nbytes)
+        for first in range(0, self.setup.x.size - 1, together):
+            true = np.empty((min(together, self.setup.x.size - 1 - first), *state.shape))
+            tables = table.flat, table.potential, table.gradient
+            march_screens(state, true, *tables, *box, table.step, table.strength, table.steps_per_screen, first)
+            for n, one in enumerate(true):
+                yield self._given(one, first + 1 + n, count, status)
 
     def _given(self, state, screen, count, status) -> RayState:
         """Return the first `count` rays, with their status brought up to date (in place)."""
@@ -120,15 +121,3 @@ class Marcher:
         rows = [state[row, :count].copy() for row in range(state.shape[0])]
         second = rows[6:8] if state.shape[0] == MATRIX_ROWS else (None, None)
         return RayState(float(self.setup.x[screen]), *rows[:6], status.copy(), *second)
-
-    @staticmethod
-    def _settle(state) -> None:
-        """Make the Maslov index agree with the sign of the true A.
-
-        It was counted on the kernel map, whose caustics lie O(step**2) from the true ones; behind a caustic A and
-        C have one sign, before it they have opposite signs.
-        """
-        a, c, maslov = state[3], state[4], state[5]
-        parity = 1.0 - 2.0 * np.mod(maslov, 2.0)
-        wrong = a * parity < 0.0
-        maslov[wrong] += np.where(a[wrong] * c[wrong] > 0.0, 1.0, -1.0)
