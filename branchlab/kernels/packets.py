@@ -3,7 +3,7 @@
 from math import exp, floor, sqrt
 
 import numpy as np
-from numba import int64, njit, prange
+from numba import get_num_threads, int64, njit, prange
 
 from branchlab.kernels.elementary import cos_sin, exponential
 from branchlab.kernels.lanes import add_block, look_up, put
@@ -51,6 +51,68 @@ def _prepare(first, count, y, p, path, turn, amplitude, stretch, k, gamma, start
             wr, wi = wr * zr - wi * zi, wr * zi + wi * zr
 
 
+@njit(**_OPTIONS)
+def _room(decay, pitch, n, reach):
+    """Return half the width of a packet's window (whole pairs of blocks of eight), its Gaussian, empty sums.
+
+    Real and imaginary rows end in different places of a 4 KiB page: stores to one do not stall loads of the other.
+    """
+    half = 8 * int64(floor(reach / sqrt(decay) / pitch / 8.0) + 1.0)
+    envelope = np.empty(2 * half)
+    for j in range(2 * half):
+        envelope[j] = exp(-0.5 * decay * ((j - half) * pitch) ** 2)
+    row = ((n + 4 * half + 511) // 512) * 512 + 264
+    return half, envelope, np.zeros((SHARES, 2 * row))
+
+
+@njit(**_OPTIONS)
+def _deposit(out, envelope, share, y, p, path, turn, amplitude, stretch, k, gamma, start, pitch, n, half, periodic):
+    """Add one share of the packets to `out`, real parts first; point j is at j + 2 half."""
+    row, width, rays = out.size // 2, 2 * half, y.size
+    centre, c, z, powers = np.empty(BATCH), np.empty(2 * BATCH), np.empty(18 * BATCH), np.empty(16)
+    last = rays * (share + 1) // SHARES
+    for first in range(rays * share // SHARES, last, BATCH):
+        count = min(BATCH, last - first)
+        _prepare(first, count, y, p, path, turn, amplitude, stretch, k, gamma, start, pitch, half, centre, c, z)
+        for t in range(count):
+            cr, ci = c[t], c[BATCH + t]
+            if cr == 0.0 and ci == 0.0:
+                continue
+            if periodic:
+                at = int64(centre[t] - n * floor(centre[t] / n)) + half
+            elif centre[t] > -half and centre[t] < n + half:
+                at = int64(centre[t]) + half
+            else:
+                continue
+            for power in range(8):
+                powers[power] = z[power * BATCH + t]
+                powers[8 + power] = z[(9 + power) * BATCH + t]
+            wr, wi = z[8 * BATCH + t], z[17 * BATCH + t]
+            # two blocks a turn: their coefficients are two independent chains of products
+            dr, di = cr * wr - ci * wi, cr * wi + ci * wr
+            wr, wi = wr * wr - wi * wi, 2.0 * wr * wi
+            for j in range(0, width, 16):
+                add_block(out, at + j, at + j + row, envelope, j, powers, cr, ci)
+                add_block(out, at + j + 8, at + j + 8 + row, envelope, j + 8, powers, dr, di)
+                cr, ci = cr * wr - ci * wi, cr * wi + ci * wr
+                dr, di = dr * wr - di * wi, dr * wi + di * wr
+
+
+@njit(**_OPTIONS)
+def _joined(sums, half, n, periodic):
+    """Return the envelope: all shares added, what hangs over the ends wrapped or dropped."""
+    psi = np.zeros(n, dtype=np.complex128)
+    row = sums.shape[1] // 2
+    for share in range(SHARES):
+        for j in range(n + 4 * half):
+            to = j - 2 * half
+            if periodic:
+                to -= n * int64(floor(to / n))
+            if to >= 0 and to < n:
+                psi[to] += complex(sums[share, j], sums[share, row + j])
+    return psi
+
+
 @njit(parallel=True, **_OPTIONS)
 def add_packets(y, p, path, turn, amplitude, stretch, k, gamma, start, pitch, n, reach, periodic):
     """Return the sum of Gaussian packets on n equidistant points.
@@ -66,7 +128,7 @@ def add_packets(y, p, path, turn, amplitude, stretch, k, gamma, start, pitch, n,
     k, gamma : float
         Wavenumber and packet curvature (1/length); packets have the rms width 1/sqrt(2 k gamma) in intensity.
     start, pitch, n : float, float, int
-        The points.
+        The points. A pitch beyond 10/sqrt(k gamma) overflows: packets would fall between the points.
     reach : float
         A packet is cut where its Gaussian is below exp(-reach**2 / 2).
     periodic : bool
@@ -75,53 +137,29 @@ def add_packets(y, p, path, turn, amplitude, stretch, k, gamma, start, pitch, n,
     Returns
     -------
     complex128, shape (n,)
-        The same to the last bit for any number of threads.
+        The same to the last bit for any number of threads, and from `add_packets_alone`.
     """
-    rays = y.size
-    # windows of whole pairs of blocks of eight
-    half = 8 * int64(floor(reach / sqrt(k * gamma) / pitch / 8.0) + 1.0)
-    width = 2 * half
-    envelope = np.empty(width)
-    for j in range(width):
-        envelope[j] = exp(-0.5 * k * gamma * ((j - half) * pitch) ** 2)
-    # real and imaginary rows end in different places of a 4 KiB page: stores to one do not stall loads of the other
-    row = ((n + 2 * width + 511) // 512) * 512 + 264
-    sums = np.zeros((SHARES, 2 * row))
+    half, envelope, sums = _room(k * gamma, pitch, n, reach)
     for share in prange(SHARES):
-        out = sums[share]
-        centre, c, z, powers = np.empty(BATCH), np.empty(2 * BATCH), np.empty(18 * BATCH), np.empty(16)
-        last = rays * (share + 1) // SHARES
-        for first in range(rays * share // SHARES, last, BATCH):
-            count = min(BATCH, last - first)
-            _prepare(first, count, y, p, path, turn, amplitude, stretch, k, gamma, start, pitch, half, centre, c, z)
-            for t in range(count):
-                cr, ci = c[t], c[BATCH + t]
-                if cr == 0.0 and ci == 0.0:
-                    continue
-                if periodic:
-                    at = int64(centre[t] - n * floor(centre[t] / n)) + half
-                elif centre[t] > -half and centre[t] < n + half:
-                    at = int64(centre[t]) + half
-                else:
-                    continue
-                for power in range(8):
-                    powers[power] = z[power * BATCH + t]
-                    powers[8 + power] = z[(9 + power) * BATCH + t]
-                wr, wi = z[8 * BATCH + t], z[17 * BATCH + t]
-                # two blocks a turn: their coefficients are two independent chains of products
-                dr, di = cr * wr - ci * wi, cr * wi + ci * wr
-                wr, wi = wr * wr - wi * wi, 2.0 * wr * wi
-                for j in range(0, width, 16):
-                    add_block(out, at + j, at + j + row, envelope, j, powers, cr, ci)
-                    add_block(out, at + j + 8, at + j + 8 + row, envelope, j + 8, powers, dr, di)
-                    cr, ci = cr * wr - ci * wi, cr * wi + ci * wr
-                    dr, di = dr * wr - di * wi, dr * wi + di * wr
-    psi = np.zeros(n, dtype=np.complex128)
+        _deposit(
+            sums[share], envelope, share,
+            y, p, path, turn, amplitude, stretch, k, gamma, start, pitch, n, half, periodic,
+        )  # fmt: skip
+    return _joined(sums, half, n, periodic)
+
+
+@njit(**_OPTIONS)
+def add_packets_alone(y, p, path, turn, amplitude, stretch, k, gamma, start, pitch, n, reach, periodic):
+    """Return what `add_packets` returns, by one thread: for callers that have work for all threads."""
+    half, envelope, sums = _room(k * gamma, pitch, n, reach)
     for share in range(SHARES):
-        for j in range(n + 2 * width):
-            to = j - width
-            if periodic:
-                to -= n * int64(floor(to / n))
-            if to >= 0 and to < n:
-                psi[to] += complex(sums[share, j], sums[share, row + j])
-    return psi
+        _deposit(
+            sums[share], envelope, share,
+            y, p, path, turn, amplitude, stretch, k, gamma, start, pitch, n, half, periodic,
+        )  # fmt: skip
+    return _joined(sums, half, n, periodic)
+
+
+def threads() -> int:
+    """Return how many threads the compiled loops may use."""
+    return get_num_threads()

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from branchlab.kernels.packets import add_packets
+from branchlab.kernels.packets import add_packets, add_packets_alone
 from branchlab.semiclassics.manifold import Line, Manifold
 
 THINNING = 30.0
@@ -50,10 +50,10 @@ class FrozenGaussians:
         self.size = m.ds * m.amplitude * (gamma * spread) ** 0.25
         self.manifold, self.gamma, self.reach = manifold, gamma, reach
 
-    def field(self, k: float, line: Line) -> np.ndarray:
-        """Return the envelope on a line for one wavenumber, shape (n,)."""
+    def field(self, k: float, line: Line, *, alone: bool = False) -> np.ndarray:
+        """Return the envelope on a line for one wavenumber, shape (n,); `alone`: by one thread."""
         m = self.manifold
-        psi = add_packets(
+        psi = (add_packets_alone if alone else add_packets)(
             m.y, m.p, m.action, self.turn, self.size, self.stretch, k, self.gamma, *line[:3], self.reach, line.periodic
         )
         return np.sqrt(0.5 * k / np.pi) * psi

@@ -3,7 +3,7 @@
 import numpy as np
 
 from branchlab.errors import check_memory
-from branchlab.kernels.packets import add_packets
+from branchlab.kernels.packets import add_packets, add_packets_alone
 from branchlab.launch.part import CoherentPart, FrontRays
 from branchlab.semiclassics.frozen import packet_turn
 from branchlab.semiclassics.manifold import Line
@@ -160,11 +160,11 @@ class HermanKluk:
         gamma = space.gamma
         self.parted = space.spacing * np.sqrt(0.5 * (A**2 + D**2 + (gamma * B) ** 2 + (C / gamma) ** 2))
 
-    def field(self, which: int, line: Line) -> np.ndarray:
-        """Return the envelope on a line for the wavenumber space.k[which], shape (n,)."""
+    def field(self, which: int, line: Line, *, alone: bool = False) -> np.ndarray:
+        """Return the envelope on a line for the wavenumber space.k[which], shape (n,); `alone`: by one thread."""
         space = self.space
         size, turn = space.size[which] * self.root, space.phase[which] + self.turn
-        return add_packets(
+        return (add_packets_alone if alone else add_packets)(
             self.y, self.p, self.action, turn, size, np.zeros_like(size), space.k[which], space.gamma,
             *line[:3], space.reach, line.periodic,
         )  # fmt: skip

@@ -89,11 +89,11 @@ class FrontScreen:
             self.found[line] = AiryPairs(self.manifold, line) if uniform else find_branches(self.manifold, line)
         return self.found[line]
 
-    def field(self, which: int, line: Line) -> np.ndarray:
-        """Return the envelope for the wavenumber launch.k[which], shape (n,)."""
+    def field(self, which: int, line: Line, *, alone: bool = False) -> np.ndarray:
+        """Return the envelope for the wavenumber launch.k[which], shape (n,); `alone`: by one thread."""
         k = self.launch.k[which]
         if self.frozen:
-            return self.frozen.field(k, line)
+            return self.frozen.field(k, line, alone=alone)
         found = self._on(line)
         psi = found.field(k) if self.launch.method == "uniform" else primitive_sum(found, k, line.n)
         return psi * np.exp(1j * self.manifold.phase)

@@ -1,13 +1,18 @@
 """Coherent sums over rays: many wavelengths on rays that are traced once."""
 
+import collections
 import math
+from concurrent.futures import ThreadPoolExecutor
+from typing import NamedTuple
 
 import numpy as np
 
 from branchlab.conventions import CARRIER, PARAXIAL, WAVELENGTH, Y_FINE, X, Y, wavenumber
 from branchlab.errors import InputError, check_choice, check_integer, check_memory, check_number, check_positive
+from branchlab.kernels.packets import threads
 from branchlab.launch.part import CoherentPart
 from branchlab.rays import RayEnsemble
+from branchlab.rays.march import RayState
 from branchlab.results import dataset, provenance
 from branchlab.semiclassics.curvature import packet_curvature
 from branchlab.semiclassics.frozen import FrozenGaussians
@@ -21,6 +26,20 @@ THINNED = 0.005  # share of the flux that may be thinned out before the front ge
 SHARED = 1.5  # wavenumbers that differ by no more than this factor share one phase-space grid
 PILOT_RAYS = 512
 GRID_SHARE = 0.6  # the largest angle of the rays is at this share of the grid's, so that intensities are resolved too
+
+
+class _OnScreen(NamedTuple):
+    """The sum of one coherent part on one screen for one wavenumber.
+
+    Mean intensity of the cells, flux of the rays and of the unresolved ones, squared relative error of the entry
+    field (0 elsewhere), envelope with the tilt (None unless wanted).
+    """
+
+    cells: np.ndarray
+    sent: float
+    unresolved: float
+    apart: float
+    psi: np.ndarray | None
 
 
 class SemiclassicalSum:
@@ -128,19 +147,14 @@ class SemiclassicalSum:
         psi = np.zeros((*shape, lines[0].n), dtype=np.complex128) if fields else None
         launches = list(self._launches(parts, k, lines[0], gamma))
         for done, (launch, part, which) in enumerate(launches):
-            for i, state in enumerate(self.rays.marcher.march(launch.rays, matrix=launch.matrix)):
-                screen = launch.on(state)
-                for j, w in enumerate(which):
-                    field = screen.field(j, lines[w])
-                    intensity[w, i] += part.weight * self._cells(field)
-                    sent[w, i] += part.weight * screen.flux(0.5 * setup.width)
-                    unresolved[w, i] += part.weight * screen.unresolved(j, lines[w])
-                    if i == 0 and launch.packets:
-                        given = part.entry(lines[w].points, k[w : w + 1])[0]
-                        apart = np.sum(np.abs(field - given) ** 2) / max(np.sum(np.abs(given) ** 2), 1e-300)
-                        entry[w] += part.weight * apart
+            for i, screen in enumerate(self._screens(launch, part, [lines[w] for w in which], fields)):
+                for w, one in zip(which, screen, strict=True):
+                    intensity[w, i] += part.weight * one.cells
+                    sent[w, i] += part.weight * one.sent
+                    unresolved[w, i] += part.weight * one.unresolved
+                    entry[w] += part.weight * one.apart
                     if fields:
-                        psi[w, i] = field * np.exp(1j * k[w] * part.tilt * lines[w].points)
+                        psi[w, i] = one.psi
                 if progress:
                     progress((done + (i + 1) / setup.x.size) / len(launches))
         found = intensity.sum(axis=-1) * setup.cell
@@ -162,6 +176,36 @@ class SemiclassicalSum:
         attrs = {"method": self.method, "packet_curvature": gamma, "carrier": CARRIER}
         attrs |= provenance(setup, model=PARAXIAL)
         return dataset("semiclassical", variables, coords, attrs)
+
+    def _screens(self, launch, part: CoherentPart, lines, fields: bool):
+        """Yield, screen by screen, what one launch gives on it for each of its wavenumbers.
+
+        A thread works on a whole screen while the next ones are marched: threads that meet after every sum would
+        wait for each other on a busy machine.
+        """
+        workers = threads()
+        with ThreadPoolExecutor(workers) as pool:
+            waiting = collections.deque()
+            for state in self.rays.marcher.march(launch.rays, matrix=launch.matrix):
+                waiting.append(pool.submit(self._screen, launch, part, lines, fields, state))
+                if len(waiting) > 2 * workers:
+                    yield waiting.popleft().result()
+            while waiting:
+                yield waiting.popleft().result()
+
+    def _screen(self, launch, part: CoherentPart, lines, fields: bool, state: RayState) -> list[_OnScreen]:
+        """Return what one launch gives on the screen of a ray state, for each of its wavenumbers."""
+        screen = launch.on(state)
+        sent = screen.flux(0.5 * self.setup.width)
+        found = []
+        for j, line in enumerate(lines):
+            k, field, apart = launch.k[j], screen.field(j, line, alone=True), 0.0
+            if launch.packets and state.x == 0.0:
+                given = part.entry(line.points, np.array([k]))[0]
+                apart = np.sum(np.abs(field - given) ** 2) / max(np.sum(np.abs(given) ** 2), 1e-300)
+            psi = field * np.exp(1j * k * part.tilt * line.points) if fields else None
+            found.append(_OnScreen(self._cells(field), sent, screen.unresolved(j, line), apart, psi))
+        return found
 
     @property
     def _reach(self) -> float:

@@ -6,7 +6,7 @@ import pytest
 from numba import njit
 
 from branchlab.kernels.elementary import cos_sin, exponential
-from branchlab.kernels.packets import add_packets
+from branchlab.kernels.packets import add_packets, add_packets_alone
 from tests.oracles import sum_twins as twins
 
 
@@ -63,6 +63,7 @@ def test_packets_do_not_depend_on_the_number_of_threads(rng):
     finally:
         numba.set_num_threads(many)
     np.testing.assert_array_equal(one, add_packets(*rays, 60.0, 0.37, -8.0, 16 / 384, 384, 6.0, True))
+    np.testing.assert_array_equal(one, add_packets_alone(*rays, 60.0, 0.37, -8.0, 16 / 384, 384, 6.0, True))
 
 
 def test_a_packet_narrower_than_the_pitch_stays_finite():
