@@ -146,16 +146,42 @@ def test_cusp_brightness_by_frozen_gaussians():
             assert abs(found / brightness(k) - 1) < 0.15
 
 
+def behind_the_lens(k, z, y):
+    """Return the intensity at (z, y) by Herman-Kluk; free space is quadratic, so it is exact for any front."""
+
+    def entry(s, k):
+        path = -(s**2) / (2 * F) + C4 * s**4 / 4
+        return smooth_step((1.2 - np.abs(s)) / 0.6) * np.exp(1j * np.multiply.outer(np.atleast_1d(k), path))
+
+    space = PhaseSpace(CoherentPart(1.0, 0.0, entry, None), Line(-1.5, 0.005, 600, False), [k], 0.05, 0.15, 6.0)
+    q, p = space.rays.y, space.rays.p
+    one = np.ones(q.size)
+    hk = HermanKluk(space, 1.0, q + z * p, p, 0.5 * z * p**2, (one, z * one, 0 * one, one), 0 * one)
+    return np.abs(hk.field(0, Line(y - 0.0025, 0.005, 1, False))[0]) ** 2
+
+
 def test_cusp_brightness_by_herman_kluk():
-    """Free space is quadratic: Herman-Kluk is exact at the cusp of any front; what is left is the aperture's edge."""
-
-    def entry(y, k):
-        path = -(y**2) / (2 * F) + C4 * y**4 / 4
-        return smooth_step((1.2 - np.abs(y)) / 0.6) * np.exp(1j * np.multiply.outer(np.atleast_1d(k), path))
-
+    # what is left is the edge of the aperture
     for k, limit in ((500.0, 1e-4), (1000.0, 1e-6), (2000.0, 1e-7)):
-        space = PhaseSpace(CoherentPart(1.0, 0.0, entry, None), Line(-1.5, 0.005, 600, False), [k], 0.2, 0.25, 6.0)
-        q, p = space.rays.y, space.rays.p
-        one = np.ones(q.size)
-        hk = HermanKluk(space, 1.0, q + F * p, p, 0.5 * F * p**2, (one, F * one, 0 * one, one), 0 * one)
-        assert abs(np.abs(hk.field(0, Line(-0.0025, 0.005, 1, False))[0]) ** 2 / brightness(k) - 1) < limit
+        assert abs(behind_the_lens(k, F, 0.0) / brightness(k) - 1) < limit
+
+
+def test_pearcey_pattern_by_herman_kluk():
+    """P(X, Y) = int exp i(u**4 + X u**2 + Y u) du: X = (1/z - 1/f) sqrt(k/c), Y = -(k y/z) (4/kc)**(1/4).
+
+    Brightest point of the axis at X = -2.198625, behind the cusp, 2.112977 times as bright as the cusp itself
+    (computed; picture in Pearcey, Phil. Mag. 37 (1946) 311); first pair of zeros at (-1.743604, +-2.352176)
+    (Kaminski & Paris, J. Comput. Appl. Math. 107 (1999) 31, Table 1: -1.743600, 2.352175).
+    """
+    k = 2000.0
+    unit = np.sqrt(k / C4)
+
+    def at(X, Y):
+        z = 1 / (1 / F + X / unit)
+        return behind_the_lens(k, z, -Y * z / k * (k * C4 / 4) ** 0.25) * z / F / brightness(k)
+
+    assert abs(at(-2.198625, 0.0) / 2.112977 - 1) < 1e-6
+    assert at(-2.198625, 0.0) > max(at(-2.15, 0.0), at(-2.25, 0.0))
+    # the printed digits end at 1e-6: an intensity of their square, next to 3.3 at the cusp
+    assert max(at(-1.743604, 2.352176), at(-1.743604, -2.352176)) < 1e-10
+    assert at(-1.743604, 2.2) > 1e-3
