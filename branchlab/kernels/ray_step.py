@@ -17,7 +17,7 @@ from branchlab.kernels.spline import CELL
 BLOCK = 256
 FRONT_ROWS, MATRIX_ROWS = 6, 8
 _OPTIONS = {"nogil": True, "cache": True, "error_model": "numpy", "fastmath": {"contract"}}
-_NEWTON_STEPS = 6  # y -> y + c W' is a step of 1e-3 of a cell: each Newton step squares the error
+NEWTON_STEPS = 3  # of y + c W' = true: each squares the error, 1e-2 at most and times c W_yyy = 1e-2
 
 
 @njit(**_OPTIONS)
@@ -117,13 +117,18 @@ def _march_block(state, begin, table, cells, start, inverse, step, first, last):
 
 
 @njit(**_OPTIONS)
-def _spline(table, base, y, start, inverse, mask):
-    """Return W, W', W'', W''' of the spline row that begins at `base`."""
+def _spline(table, y, start, inverse, mask):
+    """Return W and its first three derivatives from a spline row."""
     u = (y - start) * inverse
     floor = np.floor(u)
     t = u - floor
-    j = base + CELL * (int64(floor) & mask)
-    w0, w1, w2, w3, w4, w5 = table[j], table[j + 1], table[j + 2], table[j + 3], table[j + 4], table[j + 5]
+    j = CELL * (int64(floor) & mask)
+    w0 = look_up(table, j)
+    w1 = look_up(table, j + 1)
+    w2 = look_up(table, j + 2)
+    w3 = look_up(table, j + 3)
+    w4 = look_up(table, j + 4)
+    w5 = look_up(table, j + 5)
     value = w0 + t * (w1 + t * (w2 + t * (w3 + t * (w4 + t * w5))))
     first = w1 + t * (2.0 * w2 + t * (3.0 * w3 + t * (4.0 * w4 + t * 5.0 * w5)))
     second = 2.0 * w2 + t * (6.0 * w3 + t * (12.0 * w4 + t * 20.0 * w5))
@@ -132,64 +137,79 @@ def _spline(table, base, y, start, inverse, mask):
 
 
 @njit(**_OPTIONS)
-def _to_true_ray(state, i, potential, gradient, start, inverse, mask, strength):
-    """Turn ray i from coordinates of the kernel map into true ones."""
-    y, p = state[0, i], state[1, i]
-    value, first, second, _ = _spline(gradient, 0, y, start, inverse, mask)
-    p -= strength * first
-    turn = strength * second
-    _, slope, bend, third = _spline(potential, 0, y, start, inverse, mask)
-    stretch = 1.0 + strength * bend
-    shear = p * strength * third / (stretch * stretch)
-    state[0, i] = y + strength * slope
-    state[1, i] = p / stretch
-    state[2, i] -= strength * value
-    a, c = state[3, i], state[4, i]
-    state[3, i] = stretch * a
-    state[4, i] = (c - turn * a) / stretch - shear * a
-    if state.shape[0] == MATRIX_ROWS:
-        b, d = state[6, i], state[7, i]
-        state[6, i] = stretch * b
-        state[7, i] = (d - turn * b) / stretch - shear * b
+def _process_rays(y_, p_, s_, work, potential, gradient, start, inverse, mask, strength):
+    """Turn y, p, action of a block from the kernel map's to true; put stretch, turn and shear of tangents in `work`."""
+    stretch_, turn_, shear_ = work[0], work[1], work[2]
+    for i in range(BLOCK):
+        y = get(y_, i)
+        value, first, second, _ = _spline(gradient, y, start, inverse, mask)
+        _, slope, bend, third = _spline(potential, y, start, inverse, mask)
+        p = get(p_, i) - strength * first
+        stretch = 1.0 + strength * bend
+        put(y_, i, y + strength * slope)
+        put(p_, i, p / stretch)
+        put(s_, i, get(s_, i) - strength * value)
+        put(stretch_, i, stretch)
+        put(turn_, i, strength * second)
+        put(shear_, i, p * strength * third / (stretch * stretch))
 
 
 @njit(**_OPTIONS)
-def _from_true_ray(state, i, potential, gradient, start, inverse, mask, strength):
-    """Undo `_to_true_ray`."""
-    true = state[0, i]
-    y = true
-    for _ in range(_NEWTON_STEPS):
-        _, slope, bend, _ = _spline(potential, 0, y, start, inverse, mask)
-        y -= (y + strength * slope - true) / (1.0 + strength * bend)
-    _, _, bend, third = _spline(potential, 0, y, start, inverse, mask)
-    stretch = 1.0 + strength * bend
-    value, first, second, _ = _spline(gradient, 0, y, start, inverse, mask)
-    p = state[1, i] * stretch
-    turn = strength * second
-    shear = p * strength * third / (stretch * stretch)
-    a = state[3, i] / stretch
-    state[4, i] = (state[4, i] + shear * a) * stretch + turn * a
-    state[3, i] = a
-    if state.shape[0] == MATRIX_ROWS:
-        b = state[6, i] / stretch
-        state[7, i] = (state[7, i] + shear * b) * stretch + turn * b
-        state[6, i] = b
-    state[0, i] = y
-    state[1, i] = p + strength * first
-    state[2, i] += strength * value
+def _process_tangent(a_, c_, work):
+    """Turn one tangent of a block from the kernel map's to true."""
+    stretch_, turn_, shear_ = work[0], work[1], work[2]
+    for i in range(BLOCK):
+        a = get(a_, i)
+        stretch = get(stretch_, i)
+        put(c_, i, (get(c_, i) - get(turn_, i) * a) / stretch - get(shear_, i) * a)
+        put(a_, i, stretch * a)
 
 
 @njit(**_OPTIONS)
-def _settle_ray(true, i):
-    """Make the Maslov index agree with the sign of the true A.
+def _settle(a_, c_, m_):
+    """Make the Maslov index of a block agree with the sign of the true A.
 
     It is counted on the kernel map, whose caustics lie O(step**2) from the true ones; behind a caustic A and C have one
     sign, before it they have opposite signs.
     """
-    a = true[3, i]
-    even = np.floor(0.5 * true[5, i]) * 2.0 == true[5, i]
-    if (a < 0.0 and even) or (a > 0.0 and not even):
-        true[5, i] += 1.0 if a * true[4, i] > 0.0 else -1.0
+    for i in range(BLOCK):
+        a, m = get(a_, i), get(m_, i)
+        even = np.floor(0.5 * m) * 2.0 == m
+        change = 1.0 if a * get(c_, i) > 0.0 else -1.0
+        put(m_, i, m + (change if (a < 0.0 if even else a > 0.0) else 0.0))
+
+
+@njit(**_OPTIONS)
+def _unprocess_rays(y_, p_, s_, work, potential, gradient, start, inverse, mask, strength):
+    """Undo `_process_rays`."""
+    stretch_, turn_, shear_ = work[0], work[1], work[2]
+    for i in range(BLOCK):
+        true = get(y_, i)
+        y = true
+        for _ in range(NEWTON_STEPS):
+            _, slope, bend, _ = _spline(potential, y, start, inverse, mask)
+            y -= (y + strength * slope - true) / (1.0 + strength * bend)
+        _, _, bend, third = _spline(potential, y, start, inverse, mask)
+        value, first, second, _ = _spline(gradient, y, start, inverse, mask)
+        stretch = 1.0 + strength * bend
+        p = get(p_, i) * stretch
+        put(y_, i, y)
+        put(p_, i, p + strength * first)
+        put(s_, i, get(s_, i) + strength * value)
+        put(stretch_, i, stretch)
+        put(turn_, i, strength * second)
+        put(shear_, i, p * strength * third / (stretch * stretch))
+
+
+@njit(**_OPTIONS)
+def _unprocess_tangent(a_, c_, work):
+    """Undo `_process_tangent`."""
+    stretch_, turn_, shear_ = work[0], work[1], work[2]
+    for i in range(BLOCK):
+        stretch = get(stretch_, i)
+        a = get(a_, i) / stretch
+        put(c_, i, (get(c_, i) + get(shear_, i) * a) * stretch + get(turn_, i) * a)
+        put(a_, i, a)
 
 
 @njit(parallel=True, **_OPTIONS)
@@ -222,16 +242,21 @@ def march_screens(state, true, kicks, potential, gradient, cells, start, inverse
     rows = state.shape[0]
     for block in prange(state.shape[1] // BLOCK):
         begin = block * BLOCK
+        end = begin + BLOCK
+        work = np.empty((3, BLOCK))
         for n in range(true.shape[0]):
             screen = first + n
             _march_block(state, begin, kicks, cells, start, inverse, step, screen * steps, (screen + 1) * steps)
-            seen = true[n]
             for row in range(rows):
-                for i in range(begin, begin + BLOCK):
-                    seen[row, i] = state[row, i]
-            for i in range(begin, begin + BLOCK):
-                _to_true_ray(seen, i, potential[screen + 1], gradient[screen + 1], start, inverse, cells - 1, strength)
-                _settle_ray(seen, i)
+                for i in range(begin, end):
+                    true[n, row, i] = state[row, i]
+            seen = true[n, :, begin:end]
+            w, w_x = potential[screen + 1], gradient[screen + 1]
+            _process_rays(seen[0], seen[1], seen[2], work, w, w_x, start, inverse, cells - 1, strength)
+            _process_tangent(seen[3], seen[4], work)
+            _settle(seen[3], seen[4], seen[5])
+            if rows == MATRIX_ROWS:
+                _process_tangent(seen[6], seen[7], work)
 
 
 @njit(parallel=True, **_OPTIONS)
@@ -249,5 +274,10 @@ def from_true(state, potential, gradient, cells, start, inverse, strength):
     cells, start, inverse, strength :
         As for `march_screens`.
     """
-    for i in prange(state.shape[1]):
-        _from_true_ray(state, i, potential, gradient, start, inverse, cells - 1, strength)
+    for block in prange(state.shape[1] // BLOCK):
+        part = state[:, block * BLOCK : (block + 1) * BLOCK]
+        work = np.empty((3, BLOCK))
+        _unprocess_rays(part[0], part[1], part[2], work, potential, gradient, start, inverse, cells - 1, strength)
+        _unprocess_tangent(part[3], part[4], work)
+        if state.shape[0] == MATRIX_ROWS:
+            _unprocess_tangent(part[6], part[7], work)

@@ -13,7 +13,7 @@ from branchlab.rays.table import STEPS_PER_SCALE, KickTable
 
 OK, LEFT, TURNED, NOT_FINITE = 0, 1, 2, 3
 STATUS = {OK: "ok", LEFT: "left the window's box", TURNED: "turned too far for a paraxial ray", NOT_FINITE: "lost"}
-SCREENS_BYTES = 1 << 26  # rays are kept on this many bytes of screens before they are handed out
+SCREENS_BYTES = 1 << 24  # rays are kept on this many bytes of screens before they are handed out
 STEEPEST = 1.0  # |p| is the sine of the angle to x: beyond this a ray has turned back
 
 
