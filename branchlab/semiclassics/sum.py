@@ -18,9 +18,9 @@ from branchlab.semiclassics.curvature import packet_curvature
 from branchlab.semiclassics.frozen import FrozenGaussians
 from branchlab.semiclassics.launches import FrontLaunch, PhaseSpaceLaunch, launch_rays, manifold_on
 from branchlab.semiclassics.manifold import Line
-from branchlab.semiclassics.trust import trusted
+from branchlab.semiclassics.trust import CAUTIONS, trusted
 
-METHODS = ("frozen-gaussian", "herman-kluk", "uniform", "primitive")
+METHODS = tuple(CAUTIONS)
 FEWEST_RAYS, MOST_RAYS = 2048, 1 << 18
 THINNED = 0.005  # share of the flux that may be thinned out before the front gets more rays
 SHARED = 1.5  # wavenumbers that differ by no more than this factor share one phase-space grid
@@ -96,7 +96,7 @@ class SemiclassicalSum:
         self.tolerance = check_number("tolerance", tolerance, low=0.0, high=0.1, open_low=True)
 
     def __repr__(self):
-        return f"SemiclassicalSum({self.rays!r}, method={self.method!r})"
+        return f"SemiclassicalSum({self.rays!r}, method={self.method!r}) - {CAUTIONS[self.method]}"
 
     def solve(self, wavelengths, progress=None, *, fields: bool = False):
         """Sum over the rays for one or many wavelengths.
@@ -173,7 +173,8 @@ class SemiclassicalSum:
         if fields:
             variables["psi"] = ((WAVELENGTH, X, Y_FINE), psi)
             coords[Y_FINE] = ((Y_FINE,), lines[0].points)
-        attrs = {"method": self.method, "packet_curvature": gamma, "carrier": CARRIER}
+        attrs = {"method": self.method, "caution": CAUTIONS[self.method], "carrier": CARRIER}
+        attrs["packet_curvature"] = gamma
         attrs |= provenance(setup, model=PARAXIAL)
         return dataset("semiclassical", variables, coords, attrs)
 

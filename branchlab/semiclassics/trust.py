@@ -18,6 +18,17 @@ larger than a few packets; a beam that enters with 3 % error was found up to 18 
 1 % followed the wave (our measurement)."""
 
 
+CAUTIONS = {
+    "frozen-gaussian": "not to be trusted where the front is folded on phase-space areas below 2 pi/k, nor for beams "
+    "and small sources",
+    "herman-kluk": "contains part of the diffraction; not to be trusted where rays are chaotic and its grid too coarse "
+    "(flux excess, unresolved flux)",
+    "uniform": "not to be trusted at cusps, where two folds meet",
+    "primitive": "not to be trusted within some Airy widths of a caustic: infinite on it, dark behind it",
+}
+"""What every result of a method says about itself."""
+
+
 def trusted(flux_excess, unresolved_share, entry_error):
     """Return where the sum's own alarm is silent.
 

@@ -42,7 +42,7 @@ def test_duct_with_a_curved_front(k, x):
     line = Line(-0.5, 1 / 400, 400, False)
     m, slope = np.cos(A * x) + bend / A * np.sin(A * x), -A * np.sin(A * x) + bend * np.cos(A * x)
     exact = np.abs(m) ** -0.5 * np.exp(0.5j * k * slope / m * line.points**2 - 0.5j * np.pi * rays.maslov[0])
-    # round-off of the phase is k S 1e-16 = 1e-13
+    # round-off of the phase, k S 1e-16, and for packets their thinning weight, (k ds**2 ...)**2 = 5e-11
     assert relative(primitive_sum(find_branches(front, line), k, line.n), exact) < 1e-9
     assert relative(AiryPairs(front, line).field(k), exact) < 1e-9
     for gamma in (0.4 * A, A, 3 * A):

@@ -31,6 +31,7 @@ def test_result_has_the_written_layout_and_the_flux_of_its_rays(method):
     check(result, "semiclassical")
     assert result.intensity.dims == ("wavelength", "x", "y")
     assert result.attrs["method"] == method
+    assert "not to be trusted" in result.attrs["caution"]
     assert np.isfinite(result.intensity).all()
     # nothing leaves a periodic window: the mean intensity of a plane wave is 1 on every screen
     np.testing.assert_allclose(result.intensity.mean("y"), 1.0, rtol=1e-12)
@@ -170,6 +171,7 @@ def test_a_band_stands_for_its_wavelengths():
 def test_repr_names_rays_and_method():
     assert "RayEnsemble" in repr(summed())
     assert "method='frozen-gaussian'" in repr(summed())
+    assert "not to be trusted at cusps" in repr(summed(method="uniform"))
 
 
 def test_wrong_input():
