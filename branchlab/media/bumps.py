@@ -5,17 +5,26 @@ import math
 
 import attrs
 import numpy as np
-from scipy import stats
+from scipy import special
 
-from branchlab.errors import check_axis, check_choice, check_integer, check_positive
+from branchlab.errors import check_axis, check_choice, check_positive
 from branchlab.media.base import Medium
 from branchlab.media.elements import bell
-from branchlab.media.hashing import uniform
+from branchlab.media.hashing import check_seed, uniform
 from branchlab.media.spectra import GaussianSpectrum
 from branchlab.values import value
 
-CELL_RADII = 4.0  # side of the squares in which bumps are drawn
-REACH_RADII = 6.0  # a bump is exp(-36) of its height here
+CELL_RADII = 4.0  # side of the squares in which bumps are drawn, unless bumps are dense
+MOST_PER_SQUARE = 32.0
+REACH_RADII = 6.5  # a bump is exp(-42) of its height here
+TILE_RADII = (2.0, 8.0)  # points of one tile share their list of bumps
+
+
+def _tiles(points, size: float) -> list[np.ndarray]:
+    """Return the indices of points that lie in the same interval of a length, interval by interval."""
+    order = np.argsort(points, kind="stable")
+    tile = np.floor((points[order] - points[order[0]]) / size)
+    return np.split(order, np.flatnonzero(np.diff(tile)) + 1)
 
 
 @value
@@ -42,7 +51,7 @@ class BumpMedium(Medium):
     strength: float = attrs.field(converter=lambda s: check_positive("strength", s))
     radius: float = attrs.field(converter=lambda s: check_positive("radius", s))
     density: float = attrs.field(converter=lambda s: check_positive("density", s))
-    seed: int = attrs.field(converter=lambda s: check_integer("seed", s, low=0))
+    seed: int = attrs.field(converter=check_seed)
     sign: str = attrs.field(
         default="hills", kw_only=True, converter=lambda s: check_choice("sign", s, ("hills", "wells"))
     )
@@ -73,27 +82,34 @@ class BumpMedium(Medium):
         return self.with_(seed=seed)
 
     def _centres(self, x0: float, x1: float, y0: float, y1: float):
-        """Return the bumps of all squares that touch a rectangle, shape (bump,) each."""
-        side = CELL_RADII * self.radius
+        """Return the bumps of all squares that touch a rectangle: their x and y, shape (bump,)."""
+        side = min(CELL_RADII * self.radius, math.sqrt(MOST_PER_SQUARE / self.density))
+        expected = self.density * side**2
         i = np.arange(math.floor(x0 / side), math.floor(x1 / side) + 1)[:, None]
         j = np.arange(math.floor(y0 / side), math.floor(y1 / side) + 1)[None, :]
-        counts = stats.poisson.ppf(uniform(self.seed, i, j), self.density * side**2).astype(np.int64)
-        i, j = (np.broadcast_to(one, counts.shape).ravel() for one in (i, j))
-        x, y = [], []
-        for number in range(int(counts.max(initial=0))):
-            there = counts.ravel() > number
-            x.append((i[there] + uniform(self.seed, i[there], j[there], 2 * number + 1)) * side)
-            y.append((j[there] + uniform(self.seed, i[there], j[there], 2 * number + 2)) * side)
-        return (np.concatenate(one) if one else np.empty(0) for one in (x, y))
+        # Poisson numbers by inversion of their distribution
+        reached = special.pdtr(np.arange(math.ceil(expected + 12.0 * math.sqrt(expected) + 40.0)), expected)
+        counts = np.searchsorted(reached, uniform(self.seed, i, j)).ravel()
+        i, j = (np.repeat(np.broadcast_to(one, (i.size, j.size)).ravel(), counts) for one in (i, j))
+        number = np.arange(i.size) - np.repeat(np.cumsum(counts) - counts, counts)
+        return (
+            (i + uniform(self.seed, i, j, 2 * number + 1)) * side,
+            (j + uniform(self.seed, i, j, 2 * number + 2)) * side,
+        )
 
     def rows(self, x, y, *, dx: int = 0, dy: int = 0) -> np.ndarray:
         """Return v or a derivative of it (see `Medium.rows`)."""
         x, y = check_axis("x", x, minimum=1), check_axis("y", y, minimum=1)
         reach = REACH_RADII * self.radius
-        at_x, at_y = self._centres(x.min() - reach, x.max() + reach, y.min() - reach, y.max() + reach)
-        along = bell(x[:, None] - at_x, self.radius, dx)
-        across = bell(at_y[:, None] - y, self.radius, dy) * (-1.0) ** dy
-        rows = self.height * (along @ across)
+        rows = np.empty((x.size, y.size))
+        columns = _tiles(y, TILE_RADII[1] * self.radius)
+        for strip in _tiles(x, TILE_RADII[0] * self.radius):
+            at_x, at_y = self._centres(x[strip].min() - reach, x[strip].max() + reach, y.min() - reach, y.max() + reach)
+            along = bell(x[strip][:, None] - at_x, self.radius, dx)
+            for tile in columns:
+                near = (at_y > y[tile].min() - reach) & (at_y < y[tile].max() + reach)
+                rows[np.ix_(strip, tile)] = along[:, near] @ bell(y[tile] - at_y[near, None], self.radius, dy)
+        rows *= self.height
         if not (dx or dy):
             rows -= self.height * self.density * math.pi * self.radius**2
         return rows

@@ -1,6 +1,7 @@
 """A random medium as a table of Fourier modes whose amplitudes are a pure function of seed and mode number."""
 
 import functools
+import math
 import warnings
 
 import attrs
@@ -11,22 +12,22 @@ from branchlab.errors import (
     InputError,
     check_axis,
     check_choice,
-    check_integer,
     check_memory,
     check_number,
     check_positive,
 )
 from branchlab.media import spectra
 from branchlab.media.base import Medium
-from branchlab.media.hashing import complex_normal
+from branchlab.media.hashing import check_seed, complex_normal
 from branchlab.values import value
 
 FAMILIES = ("gaussian", "matern", "power-law", "exponential", "donor-layer")
+ROWS_AT_ONCE = 512
 RESOLVED = 12.0  # a grid of scale/8 resolves wavenumbers up to RESOLVED/scale: scale = RESOLVED/cut
 
 
-def _optional_positive(name):
-    return lambda s: s if s is None else check_positive(name, s)
+def _optional(name, *, low=0.0, high=math.inf):
+    return lambda s: s if s is None else check_number(name, s, low=low, high=high, open_low=low == 0.0)
 
 
 @value
@@ -40,7 +41,7 @@ class RandomMedium(Medium):
     Parameters
     ----------
     strength : float
-        Ensemble rms of v (that of one realisation differs by some percent: `statistics` reports it).
+        Ensemble rms of v (that of one realisation differs by some percent: `realised_rms`, `statistics`).
     correlation_length : float
         The length l in the family's formula; see Notes.
     seed : int
@@ -48,14 +49,18 @@ class RandomMedium(Medium):
     family : {"gaussian", "matern", "power-law", "exponential", "donor-layer"}
         Shape of the spectrum.
     smoothness : float, optional
-        nu of "matern". Default 5/2; rays have no limit for nu <= 3/2.
+        nu of "matern", up to 30. Default 5/2; rays have no limit for nu <= 3/2.
     exponent : float, optional
-        Of "power-law": S ~ q**(-exponent) between outer and inner scale. Default 8/3.
+        Of "power-law", 1 ... 12: S ~ q**(-exponent) between outer and inner scale. Default 8/3.
     inner_scale : float, optional
         Of "power-law": the spectrum ends with exp(-q**2 inner_scale**2/4). Default correlation_length/10.
     box : (float, float), optional
         Lengths (Bx, By) of the super-box, after which the medium repeats. Default 128 by 64 correlation lengths
         (64 by 32 for "power-law").
+    lost_variance : float, optional
+        Share of the variance that the cut-off in wavenumber leaves out. Default: the family's, 2e-16 (gaussian), 1e-9
+        (donor-layer), at most 1e-7 (power-law), (1 + 36**2)**(-smoothness) (matern: 2e-8 at 5/2), 2 % (exponential).
+        A smaller one adds modes and leaves those that are there as they are.
 
     Notes
     -----
@@ -72,12 +77,17 @@ class RandomMedium(Medium):
 
     strength: float = attrs.field(converter=lambda s: check_positive("strength", s))
     correlation_length: float = attrs.field(converter=lambda s: check_positive("correlation_length", s))
-    seed: int = attrs.field(converter=lambda s: check_integer("seed", s, low=0))
+    seed: int = attrs.field(converter=check_seed)
     family: str = attrs.field(default="gaussian", converter=lambda s: check_choice("family", s, FAMILIES))
-    smoothness: float | None = attrs.field(default=None, kw_only=True, converter=_optional_positive("smoothness"))
-    exponent: float | None = attrs.field(default=None, kw_only=True, converter=_optional_positive("exponent"))
-    inner_scale: float | None = attrs.field(default=None, kw_only=True, converter=_optional_positive("inner_scale"))
+    smoothness: float | None = attrs.field(default=None, kw_only=True, converter=_optional("smoothness", high=30.0))
+    exponent: float | None = attrs.field(
+        default=None, kw_only=True, converter=_optional("exponent", low=1.0, high=12.0)
+    )
+    inner_scale: float | None = attrs.field(default=None, kw_only=True, converter=_optional("inner_scale"))
     box: tuple[float, float] | None = attrs.field(default=None, kw_only=True)
+    lost_variance: float | None = attrs.field(
+        default=None, kw_only=True, converter=_optional("lost_variance", low=1e-16, high=0.5)
+    )
 
     def __attrs_post_init__(self):
         homes = {"smoothness": "matern", "exponent": "power-law", "inner_scale": "power-law"}
@@ -106,7 +116,7 @@ class RandomMedium(Medium):
         if not self.spectrum.limit:
             warnings.warn(
                 f"the rays of family {self.family!r} have no limit: the curvature noise D is infinite, and caustics depend "
-                f"on the shortest structure kept ({2 * np.pi / self.spectrum.cut:.3g}).",
+                f"on the shortest structure kept ({2 * np.pi / self.cut:.3g}).",
                 BranchlabWarning,
                 stacklevel=4,
             )
@@ -127,10 +137,15 @@ class RandomMedium(Medium):
         }
         return kinds[self.family](length)
 
+    @functools.cached_property
+    def cut(self) -> float:
+        """Wavenumber beyond which modes are left out."""
+        return self.spectrum.cut if self.lost_variance is None else self.spectrum.cut_for(self.lost_variance)
+
     @property
     def scale(self) -> float:
         """The correlation length of a gaussian medium; less where the spectrum reaches further."""
-        return RESOLVED / self.spectrum.cut
+        return min(RESOLVED / self.cut, self.correlation_length)
 
     @property
     def repeats_after(self) -> tuple[float, float]:
@@ -147,25 +162,33 @@ class RandomMedium(Medium):
         """Return another realisation."""
         return self.with_(seed=seed)
 
-    @functools.cached_property
-    def _table(self):
-        """Wavenumbers qx (M,), qy (N,) and complex amplitudes A (M, N)."""
+    def _shares(self, cut: float):
+        """Return qx (M,), qy (N,) and S(q) of the kept half plane (M, N), 0 beyond the cut."""
         bx, by = self.repeats_after
-        cut = self.spectrum.cut
         top_x, top_y = int(cut * bx / (2 * np.pi)), int(cut * by / (2 * np.pi))
         check_memory(
             80.0 * (2 * top_x + 1) * (top_y + 1),
             f"the medium's table of {2 * top_x + 1} x {top_y + 1} modes",
-            "Use a smaller box, or a family whose spectrum ends earlier.",
+            "Use a smaller box, a larger lost_variance, or a family whose spectrum ends earlier.",
         )
         m, n = np.arange(-top_x, top_x + 1), np.arange(0, top_y + 1)
         qx, qy = 2 * np.pi * m / bx, 2 * np.pi * n / by
         q = np.hypot(qx[:, None], qy[None, :])
         kept = (q <= cut) & ((n[None, :] > 0) | (m[:, None] > 0))
-        share = np.where(kept, self.spectrum.density(q), 0.0)
+        return qx, qy, np.where(kept, self.spectrum.density(q), 0.0)
+
+    @functools.cached_property
+    def _table(self):
+        """Wavenumbers qx (M,), qy (N,) and complex amplitudes A (M, N)."""
+        reference = self.spectrum.cut  # the norm must not depend on the cut-off asked for
+        qx, qy, share = self._shares(reference)
         # the mean is left out and the box makes of the integral over q a sum: the variance is made exact
-        share *= 4.0 * self.strength**2 / (2.0 * share.sum())
-        return qx, qy, np.sqrt(share) * complex_normal(self.seed, m[:, None], n[None, :])
+        whole = 2.0 * share.sum() / (1.0 - self.spectrum.share_beyond(reference))
+        if self.cut != reference:
+            qx, qy, share = self._shares(self.cut)
+        m, n = np.arange(qx.size) - qx.size // 2, np.arange(qy.size)
+        amplitude = np.sqrt(4.0 * self.strength**2 / whole * share)
+        return qx, qy, amplitude * complex_normal(self.seed, m[:, None], n[None, :])
 
     @property
     def realised_rms(self) -> float:
@@ -177,7 +200,18 @@ class RandomMedium(Medium):
         """Return v, or a derivative of it, on the product grid (see `Medium.rows`); exact mode sums."""
         x, y = check_axis("x", x), check_axis("y", y)
         qx, qy, amplitude = self._table
-        along = np.exp(1j * np.outer(x, qx)) * (1j * qx) ** dx
-        partial = (along @ amplitude) * (1j * qy) ** dy
         phase = np.outer(qy, y)
-        return partial.real @ np.cos(phase) - partial.imag @ np.sin(phase)
+        cosine, sine = np.cos(phase), np.sin(phase)
+        rows = np.empty((x.size, y.size))
+        for at in range(0, x.size, ROWS_AT_ONCE):
+            along = np.exp(1j * np.outer(x[at : at + ROWS_AT_ONCE], qx)) * (1j * qx) ** dx
+            partial = (along @ amplitude) * (1j * qy) ** dy
+            rows[at : at + ROWS_AT_ONCE] = partial.real @ cosine - partial.imag @ sine
+        return rows
+
+    def _described(self):
+        for name, text in super()._described():
+            if name == "correlation_length":
+                yield name, f"{text} [l of {self.spectrum.formula}]"
+            elif text != "None":
+                yield name, text
