@@ -28,10 +28,13 @@ class Duct(Medium):
     y : float
         Transverse position y0 of the axis.
     profile : {"parabolic", "sech"}
+    half_aperture : float, optional
+        Of the parabolic profile: the parabola holds for abs(y - y0) <= half_aperture, below 2/(3 rate); it then flattens
+        over the same length to v = (1.5 rate half_aperture)**2, with five continuous derivatives. Default: it goes on.
 
     Notes
     -----
-    A parabolic duct reaches v = 1 at abs(y - y0) = 1/rate: windows must be narrower than 2/rate.
+    Without a half-aperture a parabolic duct reaches v = 1 at abs(y - y0) = 1/rate: windows must be narrower than 2/rate.
     """
 
     rate: float = attrs.field(converter=lambda s: check_positive("rate", s))
@@ -39,11 +42,33 @@ class Duct(Medium):
     profile: str = attrs.field(
         default="parabolic", kw_only=True, converter=lambda s: check_choice("profile", s, ("parabolic", "sech"))
     )
+    half_aperture: float | None = attrs.field(
+        default=None, kw_only=True, converter=lambda s: s if s is None else check_positive("half_aperture", s)
+    )
+
+    def __attrs_post_init__(self):
+        if self.half_aperture is None:
+            return
+        if self.profile != "parabolic":
+            raise InputError(
+                f"half_aperture belongs to the parabolic profile; the profile is {self.profile!r}, which flattens by itself. "
+                "Leave half_aperture out."
+            )
+        if self.half_aperture * self.rate >= 2.0 / 3.0:
+            raise InputError(
+                f"half_aperture {self.half_aperture:g} lets v reach {(1.5 * self.rate * self.half_aperture) ** 2:.3g}; v must "
+                f"stay below 1, so half_aperture below 2/(3 rate) = {2.0 / (3.0 * self.rate):.4g}. Use a smaller one."
+            )
 
     @property
     def scale(self) -> float:
-        """Half a radian of the rays' turns."""
-        return 0.5 / self.rate
+        """Half a radian of the rays' turns; at most a third of the half-aperture."""
+        return min(0.5 / self.rate, math.inf if self.half_aperture is None else self.half_aperture / 3.0)
+
+    @property
+    def mean(self) -> float:
+        """What v flattens to: (1.5 rate half_aperture)**2, or 0 without a half-aperture."""
+        return 0.0 if self.half_aperture is None else (1.5 * self.rate * self.half_aperture) ** 2
 
     def rows(self, x, y, *, dx: int = 0, dy: int = 0) -> np.ndarray:
         """Return v or a derivative of it (see `Medium.rows`)."""
@@ -52,12 +77,28 @@ class Duct(Medium):
             return np.zeros((x.size, y.size))
         u = self.rate * (y - self.y)
         if self.profile == "parabolic":
-            row = (u**2, 2.0 * u * self.rate, np.full_like(u, 2.0 * self.rate**2))[dy]
+            aperture = math.inf if self.half_aperture is None else self.rate * self.half_aperture
+            g, slope, bend = _flattened(u, aperture)
+            row = (g**2, 2.0 * g * slope * self.rate, 2.0 * (slope**2 + g * bend) * self.rate**2)[dy]
         else:
             t = np.tanh(u)
             bright = 1.0 - t**2
             row = (t**2, 2.0 * t * bright * self.rate, 2.0 * bright * (1.0 - 3.0 * t**2) * self.rate**2)[dy]
         return np.tile(row, (x.size, 1))
+
+
+def _flattened(u, aperture: float):
+    """Return g(u) and two derivatives: g = u up to the aperture, constant beyond twice that.
+
+    Between, g' falls from 1 to 0 as 1 - t**5 (126 - 420 t + 540 t**2 - 315 t**3 + 70 t**4), t = abs(u)/aperture - 1.
+    """
+    if not math.isfinite(aperture):
+        return u, np.ones_like(u), np.zeros_like(u)
+    t = np.clip(np.abs(u) / aperture - 1.0, 0.0, 1.0)
+    slope = 1.0 - t**5 * (126.0 - t * (420.0 - t * (540.0 - t * (315.0 - 70.0 * t))))
+    beyond = t - t**6 * (21.0 - t * (60.0 - t * (67.5 - t * (35.0 - 7.0 * t))))
+    g = np.sign(u) * (np.minimum(np.abs(u), aperture) + aperture * beyond)
+    return g, slope, -np.sign(u) * 630.0 * (t * (1.0 - t)) ** 4 / aperture
 
 
 def bell(u, radius: float, order: int):
