@@ -20,7 +20,7 @@ from branchlab.launch.setup import smooth_number
 ROWS_AT_ONCE = 256  # rows of the medium that are evaluated before they are marched through
 BLOCK_ROWS = 8  # wavelengths of one block: its rows stay in the second-level cache
 THREADS = 2
-MEDIUM_POINTS = 24  # per medium scale
+MEDIUM_POINTS = 32  # per medium scale
 OUTER = 0.9  # the spectral tail is what lies beyond this share of the grid's largest wavenumber
 PAD_LOSS = 10.0  # powers of e that the steepest ray loses on its way through the absorber
 
@@ -86,7 +86,7 @@ class March:
         absorber = setup.window.absorber(setup.window.points(n))
         # the absorber's mean height is a half: exp(-loss) for a ray that crosses it twice at the largest angle
         rate = PAD_LOSS * angle / setup.window.pad if setup.window.pad else 0.0
-        # a grid this dense carries the medium's whole spectrum (to 1e-9 at the ends of the box): finer rows follow
+        # a grid this dense carries the medium's whole spectrum (to 1e-8 in the taper at the ends, 1e-10 inside): finer rows follow
         dense = MEDIUM_POINTS * self.span / setup.medium.scale
         self.medium_points = min(n, smooth_number(math.ceil(dense)))
         self.keep = np.exp(-rate * self.step * absorber).astype(self.real)
