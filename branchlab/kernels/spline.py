@@ -1,24 +1,28 @@
 """Periodic quintic splines in polynomial form: the tables that ray steps look up."""
 
 import numpy as np
+from numba import njit
 
 CELL = 8
 
-# rows: power of t; columns: coefficients of the B-splines at offsets -2 ... 3
-_QUINTIC = (
-    np.array(
-        [
-            [1, 26, 66, 26, 1, 0],
-            [-5, -50, 0, 50, 5, 0],
-            [10, 20, -60, 20, 10, 0],
-            [-10, 20, 0, -20, 10, 0],
-            [5, -20, 30, -20, 5, 0],
-            [-1, 5, -10, 10, -5, 1],
-        ],
-        dtype=np.float64,
-    )
-    / 120.0
-)
+
+@njit(nogil=True, cache=True, error_model="numpy")
+def _polynomials(weights, cells):
+    """Turn B-spline weights (row, n) into the polynomials of the cells (row, n, CELL)."""
+    n = weights.shape[1]
+    for row in range(weights.shape[0]):
+        w = weights[row]
+        for j in range(n):
+            w0, w1, w2 = w[(j - 2) % n], w[(j - 1) % n], w[j]
+            w3, w4, w5 = w[(j + 1) % n], w[(j + 2) % n], w[(j + 3) % n]
+            cell = cells[row, j]
+            cell[0] = (w0 + w4 + 26.0 * (w1 + w3) + 66.0 * w2) / 120.0
+            cell[1] = (w4 - w0 + 10.0 * (w3 - w1)) / 24.0
+            cell[2] = (w0 + w4 + 2.0 * (w1 + w3) - 6.0 * w2) / 12.0
+            cell[3] = (w4 - w0 - 2.0 * (w3 - w1)) / 12.0
+            cell[4] = (w0 + w4 - 4.0 * (w1 + w3) + 6.0 * w2) / 24.0
+            cell[5] = (w5 - w0 + 5.0 * (w1 - w4) + 10.0 * (w3 - w2)) / 120.0
+            cell[6] = cell[7] = 0.0
 
 
 def quintic_cells(samples) -> np.ndarray:
@@ -40,7 +44,6 @@ def quintic_cells(samples) -> np.ndarray:
     w = 2.0 * np.pi * np.arange(n // 2 + 1) / n
     gain = (66.0 + 52.0 * np.cos(w) + 2.0 * np.cos(2.0 * w)) / 120.0
     weights = np.fft.irfft(np.fft.rfft(samples, axis=-1) / gain, n=n, axis=-1)
-    shifted = np.stack([np.roll(weights, 2 - m, axis=-1) for m in range(6)], axis=-1)
-    cells = np.zeros((*samples.shape, CELL))
-    cells[..., :6] = shifted @ _QUINTIC.T
+    cells = np.empty((*samples.shape, CELL))
+    _polynomials(weights, cells)
     return cells

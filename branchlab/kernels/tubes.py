@@ -11,6 +11,7 @@ import numpy as np
 from numba import njit, prange
 
 _OPTIONS = {"nogil": True, "cache": True, "error_model": "numpy"}
+CHUNK = 512
 STRAIGHT = 1e-3  # cells of sagitta below which a tube is laid as a straight line
 
 
@@ -135,16 +136,15 @@ def lay_tube(out, y0, y1, a0, a1, flux, cells, periodic, coarse):
 
 
 @njit(parallel=True, **_OPTIONS)
-def lay_tubes(y, slope, flux, lap, start, pitch, cells, periodic, coarse, threads):
-    """Lay all tubes of a front into a row of cells.
+def lay_tubes(y, stretch, steps, flux, lap, start, pitch, cells, periodic, coarse):
+    """Lay all tubes of a front into the cells of every screen.
 
     Parameters
     ----------
-    y, slope : ndarray, shape (ray,)
-        Positions, and dy/ds times the step to the next ray (`slope[0, i]`) and from the one before
-        (`slope[1, i]`).
-    flux : ndarray, shape (tube,)
-        One fewer than rays for an open front, as many for a closed one.
+    y, stretch : ndarray, shape (screen, ray)
+        Positions and dy/ds.
+    steps, flux : ndarray, shape (tube,)
+        Step of s and flux of each tube: one tube fewer than rays for an open front, as many for a closed one.
     lap : float
         For a closed front, the y by which the first ray follows the last.
     start, pitch : float
@@ -154,35 +154,65 @@ def lay_tubes(y, slope, flux, lap, start, pitch, cells, periodic, coarse, thread
         Whether what leaves on one side enters on the other.
     coarse : float
         Sagitta in cells above which a tube is unresolved.
-    threads : int
 
     Returns
     -------
-    laid : ndarray, shape (cells,)
-    outside : float
-        Flux beyond an open row of cells.
-    unresolved : float
+    laid : ndarray, shape (screen, cells)
+    outside, unresolved : ndarray, shape (screen,)
+        Flux beyond an open row of cells, and flux of tubes that were laid as straight lines.
     """
-    parts = np.zeros((threads, cells + 2))
-    rays, tubes = y.size, flux.size
-    for chunk in prange(threads):
-        out = parts[chunk]
-        for i in range(tubes * chunk // threads, tubes * (chunk + 1) // threads):
+    screens, rays, tubes = y.shape[0], y.shape[1], flux.size
+    laid = np.zeros((screens, cells + 1))
+    unresolved = np.zeros(screens)
+    for m in prange(screens):
+        n = m // 2 if m % 2 == 0 else screens - 1 - m // 2  # later screens are dearer: every thread gets some of both
+        for i in range(tubes):
             j = i + 1
             ahead = 0.0
             if j == rays:
                 j = 0
                 ahead = lap
-            out[cells + 1] += lay_tube(
-                out,
-                (y[i] - start) / pitch,
-                (y[j] + ahead - start) / pitch,
-                slope[0, i] / pitch,
-                slope[1, j] / pitch,
+            unresolved[n] += lay_tube(
+                laid[n],
+                (y[n, i] - start) / pitch,
+                (y[n, j] + ahead - start) / pitch,
+                stretch[n, i] * steps[i] / pitch,
+                stretch[n, j] * steps[i] / pitch,
                 flux[i],
                 cells,
                 periodic,
                 coarse,
             )
-    total = parts.sum(axis=0)
-    return total[:cells], total[cells], total[cells + 1]
+    return laid[:, :cells].copy(), laid[:, cells].copy(), unresolved
+
+
+@njit(parallel=True, **_OPTIONS)
+def worst_sagitta(y0, y1, a0, a1, steps, edge):
+    """Return how far each tube departs from a straight line on its worst screen.
+
+    Parameters
+    ----------
+    y0, y1, a0, a1 : ndarray, shape (screen, tube)
+        Positions and dy/ds of the rays at both ends.
+    steps : ndarray, shape (tube,)
+        Step of s between them.
+    edge : float
+        A tube that lies wholly beyond y = edge, or below -edge, counts as straight there.
+
+    Returns
+    -------
+    ndarray, shape (tube,)
+        Largest abs(a0 step - (y1 - y0)) + abs(a1 step - (y1 - y0)).
+    """
+    tubes = steps.size
+    worst = np.zeros(tubes)
+    for chunk in prange((tubes + CHUNK - 1) // CHUNK):
+        for n in range(y0.shape[0]):
+            for i in range(chunk * CHUNK, min((chunk + 1) * CHUNK, tubes)):
+                low, high = y0[n, i], y1[n, i]
+                chord = high - low
+                sagitta = abs(a0[n, i] * steps[i] - chord) + abs(a1[n, i] * steps[i] - chord)
+                reach = edge + sagitta
+                if not (min(low, high) > reach or max(low, high) < -reach):
+                    worst[i] = max(worst[i], sagitta)
+    return worst

@@ -2,22 +2,22 @@
 
 import functools
 import math
+from collections.abc import Iterable, Iterator
 
 import numpy as np
 import xarray as xr
 
 from branchlab.conventions import CAUSTIC, PARAXIAL, RAY, X, Y
-from branchlab.errors import check_integer, check_number, check_positive
+from branchlab.errors import check_integer, check_memory, check_number, check_positive
 from branchlab.kernels.tubes import lay_tubes
 from branchlab.launch.part import FrontRays
-from branchlab.rays.caustics import caustic_points
+from branchlab.rays.caustics import CausticPoints, caustic_points
 from branchlab.rays.front import TracedFront
-from branchlab.rays.march import Marcher, refuse_turned
-from branchlab.rays.table import STEPS_PER_SCALE
+from branchlab.rays.march import Marcher, RayState, refuse_turned
+from branchlab.rays.table import POINTS_PER_SCALE, STEPS_PER_SCALE
 from branchlab.results import dataset, provenance
 
 COARSE = 8.0  # cells of sagitta beyond which a tube is a straight thick line and its flux counts as unresolved
-THREADS = 2  # tubes are laid in this many chunks, whatever the machine: the sum does not depend on it
 
 
 class RayEnsemble:
@@ -72,19 +72,19 @@ class RayEnsemble:
         -------
         Dataset of kind "density"
             intensity (x, y), the mean over a cell; flux, lost_flux (beyond open sides), unresolved_flux, rays_per_point
-            and numerical_error (x): the misplaced flux between this density and the one of half the rays with twice the
-            step, per cell, an upper bound for every coarser resolution.
+            and numerical_error (x): the misplaced flux between this density and the one of half the rays, with twice the
+            step along x and twice the pitch of the medium's spline, per cell: an upper bound for coarser resolutions.
 
         Raises
         ------
         RangeError
-            v >= 1, or a ray that turns back.
+            v >= 1, or more than a hundredth of the flux turns back.
         ResourceError
             The front does not fit into memory.
         """
         setup = self.setup
         wanted = setup.cell if resolution is None else check_number("resolution", resolution, low=setup.cell)
-        coarser = Marcher(setup, max(1, self.steps_per_scale // 2))
+        coarser = Marcher(setup, max(1, self.steps_per_scale // 2), POINTS_PER_SCALE // 2)
         laid = np.zeros((setup.x.size, setup.y.size))
         rough = np.zeros_like(laid)
         curves = np.zeros((3, setup.x.size))
@@ -93,8 +93,7 @@ class RayEnsemble:
             flux, outside, unresolved = self._laid(front)
             laid += part.weight * flux
             rough += part.weight * self._laid(front.halved(coarser))[0]
-            crossed = np.abs(np.diff(front.y, axis=1)).sum(axis=1) / setup.width
-            curves += part.weight * np.array([outside, unresolved, crossed])
+            curves += part.weight * np.array([outside, unresolved, self._crossed(front)])
         sent = laid.sum(axis=1)
         lost, unresolved, crossed = curves
         there = np.where(sent > 0, sent, 1.0)
@@ -111,25 +110,33 @@ class RayEnsemble:
 
     def _laid(self, front: TracedFront):
         """Return flux per cell (x, y), and flux outside and unresolved (x), of one front."""
-        setup, flux = self.setup, front.tube_flux
-        laid = np.empty((setup.x.size, setup.y.size))
-        outside, unresolved = np.empty(setup.x.size), np.empty(setup.x.size)
-        periodic = setup.sides == "periodic"
-        for i in range(setup.x.size):
-            laid[i], outside[i], unresolved[i] = lay_tubes(
-                front.y[i], front.slopes(i), flux, front.lap,
-                -0.5 * setup.width, setup.cell, setup.y.size, periodic, COARSE, THREADS,
-            )  # fmt: skip
-        return laid, outside, unresolved
+        setup = self.setup
+        return lay_tubes(
+            front.y, front.A, front.steps, front.tube_flux, front.lap,
+            -0.5 * setup.width, setup.cell, setup.y.size, setup.sides == "periodic", COARSE,
+        )  # fmt: skip
+
+    def _crossed(self, front: TracedFront) -> np.ndarray:
+        """Return the mean number of rays through a point of the window (x)."""
+        y = np.concatenate([front.y, front.y[:, :1] + front.lap], axis=1) if front.lap else front.y
+        if self.setup.sides == "absorbing":
+            y = np.clip(y, -0.5 * self.setup.width, 0.5 * self.setup.width)
+        return np.abs(np.diff(y, axis=1)).sum(axis=1) / self.setup.width
 
     def _axes(self) -> dict:
         return {X: ((X,), self.setup.x), Y: ((Y,), self.setup.y)}
 
-    def _launched(self, rays: int | None):
+    def _launched(self, rays: int | None, numbers_per_ray: int = 40):
         """Return the rays of all parts in the middles of equal steps of s: FrontRays, part numbers, flux."""
         count = self.first_rays if rays is None else check_integer("rays", rays, low=1)
+        parts = self.setup.parts()
+        check_memory(
+            8.0 * numbers_per_ray * count * len(parts),
+            f"{count} rays for each of {len(parts)} coherent parts",
+            "Use fewer rays, or fewer screens.",
+        )
         fronts, numbers, flux = [], [], []
-        for number, part in enumerate(self.setup.parts()):
+        for number, part in enumerate(parts):
             low, high = part.front.span
             ds = (high - low) / count
             front = part.front.at(low + (np.arange(count) + 0.5) * ds)
@@ -154,7 +161,7 @@ class RayEnsemble:
             = d(y, p)/d(y0, p0); dyds, dpds along the front; and by ray its s, part and ray_flux. Status: 0 ok, 1 left
             the window's box, 2 turned too far, 3 lost (not finite).
         """
-        launched, numbers, flux = self._launched(rays)
+        launched, numbers, flux = self._launched(rays, 40 + 24 * self.setup.x.size)
         names = ("position", "momentum", "action", "dyds", "dpds", "maslov", "status")
         found = {name: [] for name in (*names, "dydy", "dpdy", "dydp", "dpdp")}
         walks = zip(self.marcher.march(launched), self.marcher.march(launched, matrix=True), strict=True)
@@ -189,10 +196,13 @@ class RayEnsemble:
             first_caustic (ray): its range, nan if the ray meets none in the window; and over `caustic`: position
             (caustic_x, caustic_y), momentum, ray and order of every point.
         """
-        launched, numbers, _ = self._launched(rays)
+        launched, numbers, flux = self._launched(rays)
         steps = self.marcher.table.steps_per_screen * (self.setup.x.size - 1)
         fine = Marcher(self.setup.with_(screens=steps + 1), self.steps_per_scale)
-        points = caustic_points(fine.march(launched))
+        points = caustic_points(_paraxial(fine.march(launched), flux))
+        if self.setup.sides == "absorbing":
+            seen = np.abs(points.y) <= 0.5 * self.setup.width
+            points = CausticPoints(*(column[seen] for column in points))
         first = np.full(launched.s.size, np.nan)
         early = points.order == 1
         first[points.ray[early]] = points.x[early]
@@ -233,7 +243,7 @@ class RayEnsemble:
         for state in Marcher(reached, self.steps_per_scale).march(launched):
             if state.x == x:
                 break
-        refuse_turned(state)
+        refuse_turned(state, flux)
         variables = {
             "position": ((RAY,), state.y),
             "momentum": ((RAY,), state.p),
@@ -245,3 +255,10 @@ class RayEnsemble:
         coords = {RAY: ((RAY,), np.arange(flux.size)), "s": ((RAY,), launched.s), "part": ((RAY,), numbers)}
         attrs = {**provenance(self.setup, model=PARAXIAL), "x": x}
         return dataset("section", variables, coords, attrs)
+
+
+def _paraxial(states: Iterable[RayState], flux) -> Iterator[RayState]:
+    """Hand states on while the rays are paraxial, else raise `RangeError`."""
+    for state in states:
+        refuse_turned(state, flux)
+        yield state

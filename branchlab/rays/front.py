@@ -3,6 +3,7 @@
 import numpy as np
 
 from branchlab.errors import check_memory
+from branchlab.kernels.tubes import worst_sagitta
 from branchlab.launch.part import CoherentPart
 from branchlab.rays.march import Marcher, refuse_turned
 
@@ -12,39 +13,80 @@ _NODES, _WEIGHTS = np.polynomial.legendre.leggauss(3)
 class TracedFront:
     """Rays of one coherent part on every screen, dense enough for the tubes between them.
 
-    Tubes whose sagitta |A ds - dy| exceeds a tolerance on any screen are bisected, round by round, until none is left
-    or the number of rays is used up; every new ray is traced from the source.
+    A tube between two rays is bisected while its sagitta, how far the curve through both with their stretches departs
+    from the chord, exceeds a tolerance on any screen; every new ray is traced from the source. When the number of rays
+    runs out, the worst tubes have been served first.
+
+    Parameters
+    ----------
+    part : CoherentPart
+    marcher : Marcher
+    first_rays : int
+        Equal steps of s to begin with.
+    tolerance : float
+        Largest sagitta, a length.
+    most_rays : int
 
     Attributes
     ----------
     s : ndarray, shape (ray,)
     y, A : ndarray, shape (screen, ray)
         Positions and stretch dy/ds in true coordinates.
+
+    Raises
+    ------
+    RangeError
+        More than a hundredth of the flux turns back.
+    ResourceError
+        `most_rays` do not fit into memory.
     """
 
     def __init__(self, part: CoherentPart, marcher: Marcher, first_rays: int, tolerance: float, most_rays: int):
         screens = marcher.setup.x.size
         check_memory(
-            3 * 16.0 * screens * most_rays,
+            4 * 16.0 * screens * most_rays,
             f"a front of up to {most_rays} rays on {screens} screens",
             "Use a smaller most_rays or fewer screens.",
         )
         self.part = part
         low, high = part.front.span
-        self.s = np.linspace(low, high, first_rays + 1)
-        if part.front.closed:
-            self.s = self.s[:-1]
-        self.y, self.A = _traced(part, marcher, self.s)
+        s = np.linspace(low, high, first_rays + 1)
+        y, stretch = _traced(part, marcher, s[:-1] if part.front.closed else s, refuse=True)
+        self._keep([(s[: y.shape[1]], y, stretch)])
+        if self.lap:
+            y = np.concatenate([y, y[:, :1] + self.lap], axis=1)
+            stretch = np.concatenate([stretch, stretch[:, :1]], axis=1)
+        self._refine(marcher, s, y, stretch, tolerance, most_rays)
+
+    def _refine(self, marcher: Marcher, s, y, stretch, tolerance: float, most_rays: int) -> None:
+        """Bisect the tubes between successive columns."""
+        kept = [(self.s, self.y, self.A)]
+        edge = 0.5 * marcher.setup.width if marcher.setup.sides == "absorbing" else np.inf
+        ends = np.arange(s.size - 1), np.arange(1, s.size)
+        (s0, s1), (y0, y1), (a0, a1) = ([row[..., end] for end in ends] for row in (s, y, stretch))
+        room = most_rays - self.s.size
         while True:
-            coarse = (self.sagitta() > tolerance).any(axis=0)
-            at = np.flatnonzero(coarse)
-            if at.size == 0 or self.s.size + at.size > most_rays:
+            worst = worst_sagitta(y0, y1, a0, a1, s1 - s0, edge)
+            at = np.flatnonzero(worst > tolerance)
+            if at.size > room:
+                at = np.sort(at[np.argsort(-worst[at], kind="stable")[:room]])
+            if at.size == 0:
                 break
-            new = self.s[at] + 0.5 * self.steps[at]
-            y, stretch = _traced(part, marcher, new)
-            self.s = np.insert(self.s, at + 1, new)
-            self.y = np.insert(self.y, at + 1, y, axis=1)
-            self.A = np.insert(self.A, at + 1, stretch, axis=1)
+            room -= at.size
+            new = 0.5 * (s0[at] + s1[at])
+            found, turned = _traced(self.part, marcher, new)
+            kept.append((new, found, turned))
+            s0, s1 = np.concatenate([s0[at], new]), np.concatenate([new, s1[at]])
+            y0, y1 = np.concatenate([y0[:, at], found], axis=1), np.concatenate([found, y1[:, at]], axis=1)
+            a0, a1 = np.concatenate([a0[:, at], turned], axis=1), np.concatenate([turned, a1[:, at]], axis=1)
+        self._keep(kept)
+
+    def _keep(self, batches) -> None:
+        """Join batches of rays (s, y, A) in the order of s."""
+        s = np.concatenate([one[0] for one in batches])
+        order = np.argsort(s)
+        self.s = s[order]
+        self.y, self.A = (np.concatenate([one[i] for one in batches], axis=1)[:, order] for i in (1, 2))
 
     @property
     def lap(self) -> float:
@@ -68,28 +110,6 @@ class TracedFront:
             flux += 0.5 * weight * steps * amplitude**2
         return flux
 
-    def sagitta(self) -> np.ndarray:
-        """Return how far each tube is from a straight line, shape (screen, tube)."""
-        steps = self.steps
-        ahead = self._next(self.y, self.lap)
-        chord = ahead - self.y[:, : steps.size]
-        return np.abs(self.A[:, : steps.size] * steps - chord) + np.abs(self._next(self.A, 0.0) * steps - chord)
-
-    def _next(self, rows, lap: float) -> np.ndarray:
-        """Return the value of the next ray for each tube."""
-        if self.lap:
-            return np.concatenate([rows[:, 1:], rows[:, :1] + lap], axis=1)
-        return rows[:, 1:]
-
-    def slopes(self, screen: int) -> np.ndarray:
-        """Return dy/ds times the step ahead (row 0) and behind (row 1) of each ray, shape (2, ray)."""
-        steps = self.steps
-        slopes = np.zeros((2, self.s.size))
-        slopes[0, : steps.size] = self.A[screen, : steps.size] * steps
-        behind = np.roll(steps, 1) if self.lap else np.concatenate([[0.0], steps])
-        slopes[1] = self.A[screen] * behind
-        return slopes
-
     def halved(self, marcher: Marcher) -> "TracedFront":
         """Return the front of every second ray, traced by another marcher."""
         half = object.__new__(TracedFront)
@@ -101,11 +121,13 @@ class TracedFront:
         return half
 
 
-def _traced(part: CoherentPart, marcher: Marcher, s) -> tuple[np.ndarray, np.ndarray]:
+def _traced(part: CoherentPart, marcher: Marcher, s, refuse: bool = False) -> tuple[np.ndarray, np.ndarray]:
     """Return y and A on every screen, shape (screen, ray) each."""
+    rays = part.front.at(s)
     y = np.empty((marcher.setup.x.size, s.size))
     stretch = np.empty_like(y)
-    for i, state in enumerate(marcher.march(part.front.at(s))):
-        refuse_turned(state)
+    for i, state in enumerate(marcher.march(rays)):
+        if refuse:
+            refuse_turned(state, rays.amplitude**2)
         y[i], stretch[i] = state.y, state.A
     return y, stretch
