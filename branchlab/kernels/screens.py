@@ -84,3 +84,60 @@ def multiply(field, factor):
     for j in range(field.shape[0]):
         for i in range(field.shape[1]):
             field[j, i] *= factor[j, i]
+
+
+@njit(**_OPTIONS)
+def multiply_into(out, field, factor):
+    """Set `out` to rows times a table of the same shape."""
+    for j in range(field.shape[0]):
+        for i in range(field.shape[1]):
+            out[j, i] = field[j, i] * factor[j, i]
+
+
+@njit(**_OPTIONS)
+def differentiate(out, spectrum, q, shift):
+    """Set `out` to i (q + shift) times a spectrum; one shift per row."""
+    for j in range(spectrum.shape[0]):
+        for i in range(spectrum.shape[1]):
+            out[j, i] = spectrum[j, i] * (1j * (q[i] + shift[j]))
+
+
+@njit(**_OPTIONS)
+def outer_share(spectrum, first, last):
+    """Return the share of each row's power at the places first ... last - 1, shape (rows,)."""
+    share = np.empty(spectrum.shape[0])
+    for j in range(spectrum.shape[0]):
+        whole, outer = 0.0, 0.0
+        for i in range(spectrum.shape[1]):
+            z = spectrum[j, i]
+            power = z.real * z.real + z.imag * z.imag
+            whole += power
+            if first <= i < last:
+                outer += power
+        share[j] = outer / whole if whole > 0.0 else 0.0
+    return share
+
+
+@njit(**_OPTIONS)
+def cell_intensity(out, field, slope, across, bend, strength):
+    """Set `out` to cell means of abs(u)**2 - strength Re(u* (bend u + 2 across du/dy)).
+
+    Parameters
+    ----------
+    out : ndarray, shape (rows, cells)
+    field, slope : ndarray, shape (rows, n)
+        u and du/dy; n is a multiple of the number of cells.
+    across, bend : ndarray, shape (n,)
+    strength : float
+    """
+    cells = out.shape[1]
+    per = field.shape[1] // cells
+    for j in range(field.shape[0]):
+        for cell in range(cells):
+            total = 0.0
+            for i in range(cell * per, (cell + 1) * per):
+                u, d = field[j, i], slope[j, i]
+                power = u.real * u.real + u.imag * u.imag
+                cross = u.real * d.real + u.imag * d.imag
+                total += power - strength * (bend[i] * power + 2.0 * across[i] * cross)
+            out[j, cell] = total / per

@@ -17,6 +17,7 @@ from branchlab.errors import (
 )
 from branchlab.results import dataset, provenance
 from branchlab.waves.march import March
+from branchlab.waves.table import ScreenTable
 
 PRECISIONS = {"double": np.complex128, "single": np.complex64}
 TAIL_LIMIT = 1e-5  # share of flux at the end of the spectrum above which the grid is doubled
@@ -146,17 +147,18 @@ class ParaxialWave:
             "last": np.empty((k.size, len(parts) * n), dtype=np.complex128),
         }
         psi = np.empty((k.size, setup.x.size, n), dtype=np.complex128) if fields else None
+        table = ScreenTable(setup, n, per)
         for number, part in enumerate(parts):
-            march = March(setup, part, k, n, per, PRECISIONS[self.precision])
-            for screen, field, spectrum in march.run():
-                found["intensity"][:, screen] += part.weight * march.cell_means(field, spectrum, screen)
-                found["tail"][:, screen] += part.weight * march.tail(spectrum)
+            march = March(setup, part, k, table, PRECISIONS[self.precision])
+            for seen in march.run(fields):
+                found["intensity"][:, seen.screen] += part.weight * seen.intensity
+                found["tail"][:, seen.screen] += part.weight * seen.tail
                 if fields:
-                    psi[:, screen] = march.true_field(field, screen)
+                    psi[:, seen.screen] = march.true_field(seen.field, seen.screen)
                 if progress:
-                    done = (number + screen / setup.x.size) / len(parts)
+                    done = (number + seen.screen / setup.x.size) / len(parts)
                     progress(share[0] + (share[1] - share[0]) * done)
-            found["last"][:, number * n : (number + 1) * n] = march.true_field(field, screen)
+            found["last"][:, number * n : (number + 1) * n] = march.true_field(seen.field, seen.screen)
         return found, psi
 
     def _check_memory(self, wavelengths: int, n: int, fields: bool) -> None:
