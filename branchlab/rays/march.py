@@ -56,10 +56,10 @@ def refuse_turned(state: RayState, flux=None) -> None:
         at = np.argmax(np.where(turned, np.abs(state.p), 0.0))
         angle = np.degrees(np.sqrt((flux * np.arctan(state.p) ** 2)[state.status <= TURNED].sum() / flux.sum()))
         raise RangeError(
-            f"{100 * share:.2g} % of the flux has turned to a transverse momentum |p| >= {STEEPEST:g} by x = {state.x:.4g} "
-            f"(steepest: p = {state.p[at]:.3g} at y = {state.y[at]:.4g}; rms angle {angle:.0f} degrees). |p| is the sine of "
-            f"the angle to the x axis: such rays turn back, and the paraxial model serves while they are at most "
-            f"{100 * TURNED_SHARE:g} %. Reduce the medium's strength, the source's angles or the length."
+            f"{100 * share:.2g} % of the flux has a transverse momentum |p| >= {STEEPEST:g} at x = {state.x:.4g} (steepest: "
+            f"p = {state.p[at]:.3g} at y = {state.y[at]:.4g}; rms angle {angle:.0f} degrees). |p| is the sine of the angle "
+            f"to the x axis and must stay below 1: beyond, a ray turns back, and the paraxial model serves while at most "
+            f"{100 * TURNED_SHARE:g} % of the flux does. Reduce the medium's strength, the source's angles or the length."
         )
 
 
