@@ -7,26 +7,42 @@ import pathlib
 import attrs
 import numpy as np
 import xarray as xr
-from scipy.interpolate import RectBivariateSpline
 
-from branchlab.errors import InputError, check_axis, check_choice, check_positive, suggestion
+from branchlab.errors import InputError, RangeError, check_axis, check_choice, check_memory, check_positive, suggestion
 from branchlab.media.base import Medium
 from branchlab.values import read_only, value
 
 KINDS = {
-    "v": "v = V/E = 1 - n**2",
-    "index": "refractive index n",
-    "speed": "wave speed c, n = reference/c",
-    "depth": "depth h of shallow water, n = sqrt(reference/h)",
+    "v": "v",
+    "index": "a refractive index",
+    "speed": "a wave speed",
+    "depth": "a depth (counted down from the surface)",
 }
-EVEN = 1e-6  # of the spacing: how far coordinates may be from equidistant
+PLAIN_UNITS = ("", "1", "dimensionless", "none")
+EVEN = 1e-3  # of the spacing: how far coordinates may be from equidistant (single precision leaves about 1e-4)
+COPIES = 6.0  # arrays that a sampled medium and its spline hold
 FEWEST = 6  # samples along an axis: the splines are quintic
 POINTS_PER_WAVELENGTH = 6
 ROUGH = 0.01  # share of variance in the upper half of the samples' wavenumbers: beyond, structure is being missed
 
 
+def _numbers(values) -> np.ndarray:
+    """Return a read-only float64 copy of samples, masked ones as NaN, or say that they are no real numbers."""
+    if isinstance(values, np.ma.MaskedArray):
+        values = values.astype(np.float64).filled(np.nan)
+    try:
+        kind = np.asarray(values).dtype.kind
+    except ValueError:  # rows of unequal lengths
+        kind = "O"
+    if kind not in "fiub":
+        raise InputError("values must be an array of real numbers, x first; these are of another type.")
+    return read_only(values)
+
+
 def _axis(name: str, values) -> np.ndarray:
     """Return a rising equidistant axis, or say where it is not."""
+    if np.asarray(values).dtype.kind in "mMSUO":
+        raise InputError(f"{name} must be positions, as numbers; got {np.asarray(values).dtype}.")
     axis = check_axis(name, values, minimum=FEWEST)
     steps = np.diff(axis)
     if (steps < 0).all():
@@ -40,15 +56,25 @@ def _axis(name: str, values) -> np.ndarray:
             f"{name} must rise; {name}[{at}] = {axis[at]:g} is followed by {name}[{at + 1}] = {axis[at + 1]:g}. Sort the "
             "samples and drop repeated coordinates."
         )
-    mean = (axis[-1] - axis[0]) / (axis.size - 1)
-    off = np.abs(steps - mean)
-    if off.max() > EVEN * mean + 1e-12 * np.abs(axis).max():
-        at = int(np.argmax(off))
+    usual = float(np.median(steps))
+    off = np.abs(steps - usual)
+    if off.max() > EVEN * usual:
+        at = int(np.argmax(off > EVEN * usual))
+        missing = round(steps[at] / usual) - 1
+        gap = f": {missing} missing there" if missing > 0 and abs(steps[at] / usual - missing - 1) < 0.01 else ""
         raise InputError(
-            f"{name} must be equidistant to {EVEN:g} of its spacing {mean:.6g}; the step after {name}[{at}] = {axis[at]:g} "
-            f"is {steps[at]:.6g}. A gap? Interpolate the samples to even spacing first."
+            f"{name} must be equidistant to {EVEN:g} of its spacing {usual:.6g}; the step after {name}[{at}] = {axis[at]:g} "
+            f"is {steps[at]:.6g}{gap}. Interpolate the samples to even spacing first."
         )
-    return read_only(axis)
+    return read_only(np.linspace(axis[0], axis[-1], axis.size))  # rounding of stored coordinates is not structure
+
+
+def _length_unit(text) -> str:
+    """Return a unit of length in its short spelling, "1" if there is none."""
+    text = str(text).strip()
+    short = text.lower().replace("metre", "meter").removesuffix("s")
+    known = {"meter": "m", "kilometer": "km", "millimeter": "mm", "micrometer": "um", "nanometer": "nm"}
+    return "1" if text.lower() in PLAIN_UNITS else known.get(short, text)
 
 
 @value
@@ -66,6 +92,8 @@ class SampledMedium(Medium):
         v = 1 - (reference/c)**2; the depth h of shallow water, v = 1 - reference/h.
     reference : float, optional
         The value where v = 0; it defines the wavelength. Default: the samples' mean (not for "v").
+    length_unit : str
+        Unit of x and y, "1" if they are plain numbers; `from_dataarray` and `from_netcdf` read it from the coordinates.
 
     Raises
     ------
@@ -80,13 +108,14 @@ class SampledMedium(Medium):
     refused.
     """
 
-    values: np.ndarray = attrs.field(converter=read_only)
+    values: np.ndarray = attrs.field(converter=_numbers)
     x: np.ndarray = attrs.field(converter=lambda a: _axis("x", a))
     y: np.ndarray = attrs.field(converter=lambda a: _axis("y", a))
     kind: str = attrs.field(default="v", converter=lambda s: check_choice("kind", s, KINDS))
     reference: float | None = attrs.field(
         default=None, converter=lambda s: s if s is None else check_positive("reference", s)
     )
+    length_unit: str = attrs.field(default="1", kw_only=True, converter=_length_unit)
 
     def __attrs_post_init__(self):
         shape = (self.x.size, self.y.size)
@@ -98,13 +127,12 @@ class SampledMedium(Medium):
             if self.reference is not None:
                 raise InputError(f"kind 'v' takes no reference: v is 0 where it is 0; got {self.reference:g}.")
         else:
-            self._refuse(self.values <= 0, f"is not positive; a {KINDS[self.kind]} must be")
+            self._refuse(self.values <= 0, f"is not positive; {KINDS[self.kind]} must be")
             if self.reference is None:
                 object.__setattr__(self, "reference", float(self.values.mean()))
-        self._refuse(
-            self.v >= 1,
-            "makes v = 1 - n**2 reach 1: no wave goes there. Check kind and reference, or cut the place out",
-        )
+        self._refuse(~np.isfinite(self.v), f"is out of all proportion to the reference {self.reference}")
+        else_where = "Check kind and reference, or cut the place out"
+        self._refuse(self.v >= 1, f"makes v = 1 - n**2 reach 1: no wave goes there. {else_where}")
 
     def _refuse(self, where, what: str) -> None:
         """Raise `InputError` with the first place and the number of samples for which `where` holds."""
@@ -124,7 +152,8 @@ class SampledMedium(Medium):
         Parameters
         ----------
         samples : DataArray
-            Two-dimensional, with coordinates; units of the two must be the same if both are given.
+            Two-dimensional (dimensions of size 1 are dropped), in either order, with coordinates. The attribute `units`
+            of the two coordinates must be the same length; samples of v and index have none.
         kind, reference :
             See `SampledMedium`.
         x, y : str
@@ -140,16 +169,21 @@ class SampledMedium(Medium):
                 )
             if name not in samples.coords:
                 raise InputError(f"the dimension {name!r} has no coordinate: positions are needed.")
+        if x == y:
+            raise InputError(f"x and y are the same dimension, {x!r}; the medium needs two.")
+        samples = samples.squeeze([d for d in samples.dims if d not in (x, y) and samples.sizes[d] == 1], drop=True)
         if samples.ndim != 2:
-            extra = [str(d) for d in samples.dims if d not in (x, y)]
+            extra = [f"{d} ({samples.sizes[d]})" for d in samples.dims if d not in (x, y)]
             raise InputError(f"the samples must have two dimensions; select one value along {', '.join(extra)}.")
-        units = [samples[name].attrs.get("units") for name in (x, y)]
-        if None not in units and units[0] != units[1]:
+        unit = _unit_of_axes(samples, x, y)
+        own = str(samples.attrs.get("units", "1")).strip()
+        if kind in ("v", "index") and own.lower() not in PLAIN_UNITS:
             raise InputError(
-                f"{x} is in {units[0]!r} and {y} in {units[1]!r}; both must be in one unit. Convert one of them."
+                f"{samples.name!r} is in {own!r}, and kind {kind!r} has no unit. Use kind='speed' or kind='depth' for such "
+                "values."
             )
         turned = samples.transpose(x, y)
-        return cls(turned.values, turned[x].values, turned[y].values, kind, reference)
+        return cls(turned.to_masked_array(), turned[x].values, turned[y].values, kind, reference, length_unit=unit)
 
     @classmethod
     def from_netcdf(
@@ -163,9 +197,9 @@ class SampledMedium(Medium):
         """The samples as v, shape (nx, ny)."""
         if self.kind == "v":
             return self.values
-        ratio = self.values / self.reference
-        index_squared = {"index": lambda: ratio**2, "speed": lambda: ratio**-2.0, "depth": lambda: 1.0 / ratio}
-        return read_only(1.0 - index_squared[self.kind]())
+        with np.errstate(over="ignore", divide="ignore"):
+            ratio = self.values / self.reference
+            return read_only(1.0 - ratio ** {"index": 2.0, "speed": -2.0, "depth": -1.0}[self.kind])
 
     @property
     def spacing(self) -> tuple[float, float]:
@@ -179,14 +213,16 @@ class SampledMedium(Medium):
 
     @functools.cached_property
     def scale(self) -> float:
-        """sqrt(2) rms(v)/rms(slope): l of exp(-r**2/l**2); at least 4 spacings, at most an eighth of the samples."""
-        longest = min(self.x[-1] - self.x[0], self.y[-1] - self.y[0]) / 8.0
-        lengths = [longest]
+        """sqrt(2) rms(v)/rms(slope), the l of exp(-r**2/l**2), along x or y, whichever is shorter.
+
+        At least 4 spacings of that axis; at most an eighth of the samples' range.
+        """
+        lengths = [min(self.x[-1] - self.x[0], self.y[-1] - self.y[0]) / 8.0]
         for axis, step in enumerate(self.spacing):
             slope = float(np.sqrt((np.diff(self.v, axis=axis) ** 2).mean())) / step
             if slope > 0:
-                lengths.append(math.sqrt(2.0) * float(self.v.std()) / slope)
-        return max(min(lengths), 4.0 * max(self.spacing)) if 4.0 * max(self.spacing) < longest else longest
+                lengths.append(max(math.sqrt(2.0) * float(self.v.std()) / slope, 4.0 * step))
+        return float(min(lengths))
 
     @property
     def extent(self) -> tuple[float, float, float, float]:
@@ -207,33 +243,97 @@ class SampledMedium(Medium):
         return POINTS_PER_WAVELENGTH * max(self.spacing) if rough else 0.0
 
     @functools.cached_property
-    def _spline(self) -> RectBivariateSpline:
+    def _spline(self):
+        from scipy.interpolate import RectBivariateSpline  # loads slowly; few media are sampled
+
         return RectBivariateSpline(self.x, self.y, self.v, kx=5, ky=5, s=0)
 
     def rows(self, x, y, *, dx: int = 0, dy: int = 0) -> np.ndarray:
         """Return v or a derivative of it (see `Medium.rows`)."""
         x, y = check_axis("x", x), check_axis("y", y)
+        for name, points, axis in (("x", x, self.x), ("y", y, self.y)):
+            slack = 1e-3 * (axis[1] - axis[0])  # the spline goes on as a constant
+            out = (points < axis[0] - slack) | (points > axis[-1] + slack)
+            if out.any():
+                at = int(np.argmax(out))
+                raise RangeError(
+                    f"{name}[{at}] = {points[at]:g} lies outside the samples, {axis[0]:g} <= {name} <= {axis[-1]:g}."
+                )
         order_x, order_y = np.argsort(x, kind="stable"), np.argsort(y, kind="stable")
         rows = np.empty((x.size, y.size))
         rows[np.ix_(order_x, order_y)] = self._spline(x[order_x], y[order_y], dx=dx, dy=dy)
         return rows
 
 
+def _unit_of_axes(samples: xr.DataArray, x: str, y: str) -> str:
+    """Return the one unit of both coordinates; refuse angles and two different units."""
+    units = [_length_unit(samples[name].attrs.get("units", "1")) for name in (x, y)]
+    for name, unit in zip((x, y), units, strict=True):
+        if unit.lower().startswith("degree"):
+            raise InputError(
+                f"{name} is in {unit!r}; the axes must be lengths. Project the samples to an even grid in metres or "
+                "kilometres first."
+            )
+    if len({unit for unit in units if unit != "1"}) > 1:
+        raise InputError(
+            f"{x} is in {units[0]!r} and {y} in {units[1]!r}; both must be in one unit. Convert one of them."
+        )
+    return next((unit for unit in units if unit != "1"), "1")
+
+
+def _engine(path: pathlib.Path) -> str:
+    """Return what reads a file, told by its first bytes (netCDF User's Guide, file format; HDF5 specification II.A)."""
+    try:
+        with path.open("rb") as file:
+            start = file.read(8)
+    except OSError as fault:
+        raise InputError(f"{path} cannot be read: {fault.strerror or fault}.") from None
+    if start == b"\x89HDF\r\n\x1a\n":
+        return "h5netcdf"
+    if start[:3] == b"CDF" and start[3:4] in (b"\x01", b"\x02"):
+        return "scipy"
+    more = " (its 64-bit data form: convert it to netCDF-4)" if start[:4] == b"CDF\x05" else ""
+    raise InputError(
+        f"{path} is not a netCDF file that can be read{more}: netCDF-3 starts with CDF, netCDF-4 with \\x89HDF; this starts "
+        f"with {start!r}. Convert the data to netCDF with coordinates x and y."
+    )
+
+
 def read_samples(path, variable: str) -> xr.DataArray:
-    """Read one variable of a netCDF file, with clear words for what can be wrong with it."""
+    """Read one variable of a netCDF file (3 or 4).
+
+    Parameters
+    ----------
+    path : path
+    variable : str
+
+    Raises
+    ------
+    InputError
+        No such file, not netCDF, damaged, or no such variable (near names are told).
+    ResourceError
+        The variable does not fit into memory.
+    """
     path = pathlib.Path(path)
     if not path.exists():
         raise InputError(f"there is no file {path}.")
+    engine = _engine(path)
     try:
-        with xr.open_dataset(path) as file:
+        with xr.open_dataset(path, engine=engine, decode_times=False) as file:
             names = [str(name) for name in file.data_vars]
             if variable not in file.data_vars:
                 raise InputError(
                     f"{path} has no variable {variable!r}; it has {', '.join(names) or 'none'}."
                     f"{suggestion(variable, names)}"
                 )
-            return file[variable].load()
-    except (OSError, ValueError) as fault:
-        if isinstance(fault, InputError):
-            raise
-        raise InputError(f"{path} is not a netCDF file that can be read ({fault}).") from None
+            samples = file[variable]
+            check_memory(
+                COPIES * 8.0 * samples.size,
+                f"{variable!r} of {path} ({samples.size:.3g} samples)",
+                "Thin it out first.",
+            )
+            return samples.load()
+    except (InputError, MemoryError):
+        raise
+    except Exception as fault:  # whatever a reader makes of damaged bytes
+        raise InputError(f"{path} is not a netCDF file that can be read: {fault!r:.200}.") from None
