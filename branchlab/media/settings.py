@@ -8,7 +8,7 @@ import math
 import attrs
 from scipy import constants
 
-from branchlab.errors import check_number, check_positive
+from branchlab.errors import InputError, check_number, check_positive
 from branchlab.values import ValueObject, value
 
 CAUTION = (
@@ -42,6 +42,16 @@ class Laboratory(ValueObject):
     note: str = attrs.field(default="", kw_only=True)
 
 
+def _weak(strength: float, what: str) -> float:
+    """Return an rms of v that leaves room below v = 1, else raise `InputError`."""
+    if strength >= 1.0:
+        raise InputError(
+            f"{what} make the rms of v {strength:.3g}; it must stay below 1, where nothing propagates (weak disorder: below "
+            "0.3). Check the units."
+        )
+    return strength
+
+
 def electron_gas(
     *, density: float, potential_rms_mev: float, effective_mass: float = 0.067, temperature: float | None = None
 ) -> Laboratory:
@@ -71,9 +81,14 @@ def electron_gas(
     thermal = None
     if temperature is not None:
         thermal = constants.hbar * fermi_speed / (math.pi * constants.k * check_positive("temperature", temperature))
+    strength = _weak(
+        1e-3 * rms * constants.e / energy,
+        f"potential_rms_mev {rms:g} and the Fermi energy {1e3 * energy / constants.e:.3g} meV of a density of {density:g} "
+        "per square metre",
+    )
     return Laboratory(
         2.0 * math.pi / wavenumber,
-        1e-3 * rms * constants.e / energy,
+        strength,
         speed=fermi_speed,
         thermal_length=thermal,
         note="Single electrons at the Fermi energy, one parabolic band, no magnetic field.",
@@ -95,7 +110,7 @@ def light(*, vacuum_wavelength: float, index: float, index_rms: float) -> Labora
     wavelength, index = check_positive("vacuum_wavelength", vacuum_wavelength), check_positive("index", index)
     return Laboratory(
         wavelength / index,
-        2.0 * check_positive("index_rms", index_rms) / index,
+        _weak(2.0 * check_positive("index_rms", index_rms) / index, f"index_rms {index_rms:g} and index {index:g}"),
         speed=constants.c / index,
         note="Scalar waves of one polarisation. With lasers: observe eye and skin safety limits as your licensed laser "
         "safety officer sets them; " + CAUTION,
@@ -117,7 +132,7 @@ def sound(*, frequency: float, speed: float, speed_rms: float) -> Laboratory:
     frequency, speed = check_positive("frequency", frequency), check_positive("speed", speed)
     return Laboratory(
         speed / frequency,
-        2.0 * check_positive("speed_rms", speed_rms) / speed,
+        _weak(2.0 * check_positive("speed_rms", speed_rms) / speed, f"speed_rms {speed_rms:g} and speed {speed:g}"),
         speed=speed,
         note="Linear sound without loss or shear. Sound levels can harm: " + CAUTION,
     )
@@ -151,7 +166,7 @@ def shallow_water(*, period: float, depth: float, depth_rms: float, gravity: flo
     check_number("wavelength/depth (c = sqrt(g h) holds for long waves)", speed * period / depth, low=20.0)
     return Laboratory(
         speed * period,
-        check_positive("depth_rms", depth_rms) / depth,
+        _weak(check_positive("depth_rms", depth_rms) / depth, f"depth_rms {depth_rms:g} and depth {depth:g}"),
         speed=speed,
         note="Linear long waves, no rotation, no breaking. " + CAUTION,
     )
