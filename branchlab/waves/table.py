@@ -34,7 +34,7 @@ class ScreenTable:
         self.step = setup.length / self.steps
         self.span = setup.window.span
         self.medium_points = min(n, smooth_number(math.ceil(MEDIUM_POINTS * self.span / setup.medium.scale)))
-        self._kept = {}
+        self._kept, self._along = {}, {}
 
     def _rows(self, x, *, dx: int = 0) -> np.ndarray:
         """Return v (or its x-derivative) at x and the n points, through a grid that is as fine as v needs."""
@@ -72,4 +72,6 @@ class ScreenTable:
 
     def along(self, screen: int) -> np.ndarray:
         """Return v_x on a screen, shape (n,)."""
-        return self._rows(self.setup.x[[screen]], dx=1)[0]
+        if screen not in self._along:
+            self._along[screen] = self._rows(self.setup.x[[screen]], dx=1)[0]
+        return self._along[screen]
