@@ -16,6 +16,7 @@ MEDIA = [
     BumpMedium(0.06, 0.7, 0.5, seed=2),
     Duct(0.08),
     Duct(0.1, y=0.5, profile="sech"),
+    Duct(0.1, y=-0.5, half_aperture=3.0),
     Lens(0.2, 1.5, x=3.0, y=-1.0),
     Ramp(slope_x=0.002, slope_y=-0.01),
     SampledMedium(0.05 * np.outer(np.cos(0.7 * _GRID), np.sin(0.9 * _GRID + 0.3)), _GRID, _GRID),
