@@ -1,14 +1,16 @@
 """The command `branchlab study`: from options to the verdict, the netCDF file and the figure."""
 
 import pathlib
+import shutil
 import sys
+import textwrap
 import time
 import warnings
 
 from tqdm import tqdm
 
 from branchlab.cli.files import check_target, partial
-from branchlab.errors import BranchlabWarning, InputError, check_integer, check_number
+from branchlab.errors import BranchlabWarning, InputError, check_integer, check_number, check_positive
 from branchlab.launch import Band
 from branchlab.media.settings import CAUTION
 from branchlab.page import draw_study
@@ -40,11 +42,9 @@ def run(given) -> int:
     result, remarks = _run(study, quiet=given.quiet)
     if result.attrs["stopped"]:
         target, figure = partial(target), partial(figure)
-    print(result.attrs["verdict"])
+    print(_wrapped(result.attrs["verdict"]))
     if not given.quiet:
         print(f"\n{table(result)}\n")
-        print("Range: where rays place all but the threshold of the flux rightly (95 % confidence). The parts of the")
-        print("misplaced flux add up to it.")
     for remark in remarks:
         print(f"Mind: {remark}", file=sys.stderr)
     save(result, target)
@@ -52,8 +52,10 @@ def run(given) -> int:
     draw_study(result, figure)
     print(f"The figure is {figure}")
     if not given.quiet:
-        print(f"Took {time.monotonic() - start:.0f} s.")
-        print("\n".join(text for text in (study.note, CAUTION) if text and text not in study.note))
+        print(f"It took {time.monotonic() - start:.0f} s.\n")
+        for text in (study.note, "" if CAUTION in study.note else CAUTION):
+            if text:
+                print(_wrapped(text))
     if result.attrs["stopped"]:
         return 130
     return 1 if result.attrs["failed"] != "{}" else 0
@@ -65,6 +67,11 @@ def _number(option: str, text) -> float:
         return float(text)
     except ValueError:
         raise InputError(f"--{option} must be a number; got {text!r}.") from None
+
+
+def _positive(option: str, texts) -> list[float]:
+    """Return the positive numbers that an option holds."""
+    return [check_positive(f"--{option}", _number(option, text)) for text in texts]
 
 
 def chosen_study(given) -> Study:
@@ -97,7 +104,7 @@ def _waves(given, study: Study) -> list:
     bands = study.bands
     centres = [band.centre for band in bands] or list(study.wavelengths)
     if given.wavelength is not None:
-        centres = [_number("wavelength", one) for one in given.wavelength]
+        centres = _positive("wavelength", given.wavelength)
     if given.bandwidth is not None:
         width = check_number("--bandwidth", _number("bandwidth", given.bandwidth), low=0.0)
         return [Band(centre, width) for centre in centres] if width else centres
@@ -127,7 +134,7 @@ def _own(given) -> Study:
     bandwidth = BANDWIDTH if given.bandwidth is None else check_number("--bandwidth", optional("bandwidth"), low=0.0)
     return own_study(
         medium,
-        [_number("wavelength", one) for one in given.wavelength],
+        _positive("wavelength", given.wavelength),
         bandwidth=bandwidth or None,
         length=optional("length"),
         width=optional("width"),
@@ -173,6 +180,15 @@ def _write(study: Study, path: pathlib.Path, replace: bool) -> int:
     return 0
 
 
+def _wrapped(text: str) -> str:
+    """Return text in lines of at most 110 characters, or the terminal's width, that hang under their beginning."""
+    columns = min(110, max(60, shutil.get_terminal_size((110, 24)).columns))
+    lines = []
+    for line in text.splitlines():
+        lines += textwrap.wrap(line, columns, subsequent_indent="  " if line[:1] in "- " else "", break_long_words=False)
+    return "\n".join(lines)
+
+
 def _stem(given) -> str:
     """Return the name of the result after what is studied."""
     if given.study_file or given.medium:
@@ -186,7 +202,7 @@ def _opening(study: Study) -> str:
     centres = [band.centre for band in study.bands] or study.wavelengths
     waves = ", ".join(f"{centre:g}" for centre in centres) + unit
     if study.bands:
-        waves += f", each with a band of {study.bands[0].width:.0%} ({study.solved_wavelengths().size} in all)"
+        waves += f", each with a band of {100 * study.bands[0].width:g} % ({study.solved_wavelengths().size} in all)"
     seeds = len(study.realisations)
     window = f"a window of {setup.length:g} x {setup.width:g}{unit}, {setup.sides} sides, {setup.x.size} screens"
     lines = [

@@ -107,7 +107,7 @@ def _figure(result: xr.Dataset):
         parts = [name for name in PARTS if f"misplaced_{name}" in result]
         columns = [1.5, 1.0] if parts else [1.0]
         lower = figure.add_gridspec(
-            1, len(columns), left=0.06, right=0.985, top=0.315, bottom=0.11, width_ratios=columns, wspace=0.30
+            1, len(columns), left=0.06, right=0.985, top=0.315, bottom=0.11, width_ratios=columns, wspace=0.34
         )
         shown = _shown(result)
         _headline(figure, result)
@@ -163,7 +163,7 @@ def _headline(figure, result: xr.Dataset) -> None:
         f"At resolution {resolution}, rays place all but {threshold} of the flux rightly out to",
         va="center",
     )
-    figure.text(0.06, 0.018, textwrap.shorten(study["note"], 220), color=QUIET, fontsize=8.5, va="center")
+    figure.text(0.06, 0.018, textwrap.shorten(study["note"], 185), color=QUIET, fontsize=8.5, va="center")
     figure.text(0.06, 0.876, f"{answer}.", va="center", weight="bold")
 
 

@@ -7,7 +7,7 @@ from branchlab.studies.study import Study
 MEGAHERTZ = (1.0, 2.0, 5.0, 10.0)
 SPEED, SPEED_RMS = 1500.0, 30.0  # m/s
 CORRELATION_LENGTH, LENGTH, WIDTH = 5.0, 200.0, 100.0  # mm
-BANDWIDTH, NODES = 0.4, 9
+BANDWIDTH, NODES = 0.4, 7
 SEEDS = tuple(range(1, 9))
 
 
@@ -20,7 +20,7 @@ def default_study() -> Study:
     tones = [settings.sound(frequency=1e6 * f, speed=SPEED, speed_rms=SPEED_RMS) for f in MEGAHERTZ]
     medium = RandomMedium(tones[0].strength, CORRELATION_LENGTH, SEEDS[0], box=(128 * CORRELATION_LENGTH, WIDTH))
     return Study(
-        Setup(medium, PlaneWave(), LENGTH, WIDTH, screens=81, cells=320, length_unit="mm"),
+        Setup(medium, PlaneWave(), LENGTH, WIDTH, screens=61, cells=320, length_unit="mm"),
         [Band(round(1e3 * tone.wavelength, 12), BANDWIDTH, nodes=NODES) for tone in tones],
         resolution=0.5,
         realisations=SEEDS,

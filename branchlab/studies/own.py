@@ -1,5 +1,6 @@
 """A study of somebody's own medium: what the samples leave open is chosen here, and told."""
 
+import math
 import pathlib
 
 import xarray as xr
@@ -58,9 +59,10 @@ def own_study(
     span = float(medium.y[-1] - medium.y[0])
     if width is None:
         # the fade takes 3 scales at either side, and in a narrow window a quarter (periodic) or 3/4 of the width
-        width = max(span - 2.0 * FADE_SCALES * medium.scale, span / (1.5 if sides == "periodic" else 2.5)) * (1 - 1e-9)
+        width = max(span - 2.0 * FADE_SCALES * medium.scale, span / (1.5 if sides == "periodic" else 2.5))
+        width = _rounded(width, math.floor)
     length = float(medium.x[-1]) if length is None else length
-    resolution = medium.scale / PER_SCALE if resolution is None else check_positive("resolution", resolution)
+    resolution = _rounded(medium.scale / PER_SCALE, round) if resolution is None else check_positive("resolution", resolution)
     fewest = max(16.0 / medium.scale, CELLS_IN_RESOLUTION / resolution) * check_positive("width", width)
     items = list(wavelengths) if isinstance(wavelengths, (list, tuple)) else [wavelengths]
     return Study(
@@ -71,6 +73,12 @@ def own_study(
         title=title,
         note=note,
     )
+
+
+def _rounded(value: float, way) -> float:
+    """Return a number with three significant digits, rounded by `floor` or `round`."""
+    unit = 10.0 ** (math.floor(math.log10(value)) - 2)
+    return float(f"{way(value / unit) * unit:.6g}")
 
 
 def read_medium(

@@ -206,7 +206,8 @@ class Study(ValueObject):
         Dataset of kind "comparison"
             The comparisons of all realisations, joined along `realisation` (no such dimension without seeds), with
             the variables of `validity_range`. Attributes: `study` (JSON, the setup aside), `verdict` (the answer in
-            words), `fingerprint`, `failed` (JSON: what went wrong, by seed), `stopped` (1 after Ctrl-C), `threshold`, `confidence`.
+            words), `failed` (JSON: what went wrong, by seed), `stopped` (1 after Ctrl-C), `fingerprint`, `threshold`,
+            `persistence`, `confidence`.
 
         Raises
         ------

@@ -26,7 +26,7 @@ def _reach(result: xr.Dataset, at: int, ending: str, end: float) -> str:
         return "not resolved"
     reach, low, high = (float(result[f"reach{ending}{tail}"].values[at]) for tail in ("", "_low", "_high"))
     text = _number(reach) if result["crossed" + ending].values[at] else f"> {_number(end)}"
-    if np.isnan(low):
+    if not np.isfinite(low):  # one realisation, or open-ended with all of the confidence
         return text
     upper = _number(high) if np.isfinite(high) else "open"
     return f"{text} ({_number(min(low, end))} to {upper})"
