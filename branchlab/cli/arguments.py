@@ -22,10 +22,7 @@ examples:
 
 
 class Parser(argparse.ArgumentParser):
-    """A parser that takes no abbreviations and suggests the option that was meant."""
-
-    def __init__(self, *args, **kwargs):
-        super().__init__(*args, allow_abbrev=False, **kwargs)
+    """A parser that suggests the option that was meant."""
 
     def error(self, message):
         """Print one message, with a suggestion for a misspelt option, and exit with code 2."""
@@ -47,12 +44,14 @@ def build_parser() -> Parser:
     """Return the parser of the command line."""
     parser = Parser(
         prog="branchlab",
+        allow_abbrev=False,
         description="Where ray density may stand in for wave intensity in a weakly disordered medium, and where not.",
     )
     parser.add_argument("--version", action="version", version=f"branchlab {__version__}")
     commands = parser.add_subparsers(dest="command", required=True, metavar="COMMAND")
     study = commands.add_parser(
         "study",
+        allow_abbrev=False,
         help="run a study to the verdict",
         description=STUDY,
         epilog=EXAMPLES,

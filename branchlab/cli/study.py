@@ -185,7 +185,8 @@ def _wrapped(text: str) -> str:
     columns = min(110, max(60, shutil.get_terminal_size((110, 24)).columns))
     lines = []
     for line in text.splitlines():
-        lines += textwrap.wrap(line, columns, subsequent_indent="  " if line[:1] in "- " else "", break_long_words=False)
+        indent = "  " if line.startswith(("-", " ")) else ""
+        lines += textwrap.wrap(line, columns, subsequent_indent=indent, break_long_words=False)
     return "\n".join(lines)
 
 

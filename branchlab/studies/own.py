@@ -62,7 +62,9 @@ def own_study(
         width = max(span - 2.0 * FADE_SCALES * medium.scale, span / (1.5 if sides == "periodic" else 2.5))
         width = _rounded(width, math.floor)
     length = float(medium.x[-1]) if length is None else length
-    resolution = _rounded(medium.scale / PER_SCALE, round) if resolution is None else check_positive("resolution", resolution)
+    if resolution is None:
+        resolution = _rounded(medium.scale / PER_SCALE, round)
+    resolution = check_positive("resolution", resolution)
     fewest = max(16.0 / medium.scale, CELLS_IN_RESOLUTION / resolution) * check_positive("width", width)
     items = list(wavelengths) if isinstance(wavelengths, (list, tuple)) else [wavelengths]
     return Study(
