@@ -8,208 +8,240 @@ Potentials W are quintic splines in y, one per kick: cell j holds the six coeffi
 t = (y - start)/pitch - j, 0 <= t < 1, and two doubles of padding. Cells repeat with their number, a power of 2.
 """
 
-import numpy as np
-from numba import int64, njit, prange
+from numba import njit, prange
+from numba.core import types
+from numba.extending import intrinsic
 
-from branchlab.kernels.lanes import get, look_up, put
+from branchlab.kernels.eight import LANES, load, row_addresses, spline_cells, spread, store
 from branchlab.kernels.spline import CELL
 
 BLOCK = 256
 FRONT_ROWS, MATRIX_ROWS = 6, 8
-_OPTIONS = {"nogil": True, "cache": True, "error_model": "numpy", "fastmath": {"contract"}}
-NEWTON_STEPS = 3  # of y + c W' = true: each squares the error, 1e-2 at most and times c W_yyy = 1e-2
+NEWTON_STEPS = 3  # of y + c W_y = true: each squares the error, 1e-2 at most and times c W_yyy = 1e-2
+_OPTIONS = {"nogil": True, "cache": True, "error_model": "numpy"}
+_TANGENTS = {FRONT_ROWS: ((3, 4),), MATRIX_ROWS: ((3, 4), (6, 7))}
 
 
-@njit(**_OPTIONS)
-def _advance_front(y_, p_, s_, a_, c_, m_, table, base, drift, kick, start, inverse, mask):
-    """Drift, then kick, one block of rays with one tangent."""
-    kick_p = kick * inverse
-    kick_c = kick_p * inverse
-    for i in range(BLOCK):
-        p = get(p_, i)
-        y = get(y_, i) + drift * p
-        c = get(c_, i)
-        before = get(a_, i)
-        a = before + drift * c
-        u = (y - start) * inverse
-        floor = np.floor(u)
-        t = u - floor
-        j = base + CELL * (int64(floor) & mask)
-        w0 = look_up(table, j)
-        w1 = look_up(table, j + 1)
-        w2 = look_up(table, j + 2)
-        w3 = look_up(table, j + 3)
-        w4 = look_up(table, j + 4)
-        w5 = look_up(table, j + 5)
-        value = w0 + t * (w1 + t * (w2 + t * (w3 + t * (w4 + t * w5))))
-        slope = w1 + t * (2.0 * w2 + t * (3.0 * w3 + t * (4.0 * w4 + t * 5.0 * w5)))
-        bend = 2.0 * w2 + t * (6.0 * w3 + t * (12.0 * w4 + t * 20.0 * w5))
-        put(m_, i, get(m_, i) + (1.0 if a * before < 0.0 else 0.0))
-        put(s_, i, get(s_, i) + 0.5 * drift * p * p - kick * value)
-        put(y_, i, y)
-        put(p_, i, p - kick_p * slope)
-        put(a_, i, a)
-        put(c_, i, c - kick_c * bend * a)
+def _taylor(t, w, order):
+    """Return f, f', f''/2, ... of the polynomial sum w[m] t**m (Horner's scheme)."""
+    rows = [w[-1]] + [None] * order
+    for coefficient in reversed(w[:-1]):
+        for d in range(order, 0, -1):
+            if rows[d - 1] is not None:
+                rows[d] = rows[d - 1] if rows[d] is None else rows[d - 1] + t * rows[d]
+        rows[0] = coefficient + t * rows[0]
+    return rows
 
 
-@njit(**_OPTIONS)
-def _advance_matrix(y_, p_, s_, a_, c_, m_, b_, d_, table, base, drift, kick, start, inverse, mask):
-    """Drift, then kick, one block of rays with both tangents."""
-    kick_p = kick * inverse
-    kick_c = kick_p * inverse
-    for i in range(BLOCK):
-        p = get(p_, i)
-        y = get(y_, i) + drift * p
-        c = get(c_, i)
-        d = get(d_, i)
-        before = get(a_, i)
-        a = before + drift * c
-        b = get(b_, i) + drift * d
-        u = (y - start) * inverse
-        floor = np.floor(u)
-        t = u - floor
-        j = base + CELL * (int64(floor) & mask)
-        w0 = look_up(table, j)
-        w1 = look_up(table, j + 1)
-        w2 = look_up(table, j + 2)
-        w3 = look_up(table, j + 3)
-        w4 = look_up(table, j + 4)
-        w5 = look_up(table, j + 5)
-        value = w0 + t * (w1 + t * (w2 + t * (w3 + t * (w4 + t * w5))))
-        slope = w1 + t * (2.0 * w2 + t * (3.0 * w3 + t * (4.0 * w4 + t * 5.0 * w5)))
-        bend = 2.0 * w2 + t * (6.0 * w3 + t * (12.0 * w4 + t * 20.0 * w5))
-        put(m_, i, get(m_, i) + (1.0 if a * before < 0.0 else 0.0))
-        put(s_, i, get(s_, i) + 0.5 * drift * p * p - kick * value)
-        put(y_, i, y)
-        put(p_, i, p - kick_p * slope)
-        put(a_, i, a)
-        put(b_, i, b)
-        put(c_, i, c - kick_c * bend * a)
-        put(d_, i, d - kick_c * bend * b)
+class _Row:
+    """A spline row: gives W and its derivatives at eight places."""
+
+    def __init__(self, context, builder, kind, table, base, start, inverse, mask):
+        self.table = context, builder, kind, table, base
+        self.start, self.inverse, self.mask = spread(builder, start), spread(builder, inverse), mask
+
+    def at(self, y, order):
+        """Return W, W_y, W_yy/2, W_yyy/6, as far as `order`."""
+        u = (y - self.start) * self.inverse
+        floor = u.floor()
+        rows = _taylor(u - floor, spline_cells(*self.table, floor, self.mask), order)
+        scale = self.inverse
+        for d in range(1, order + 1):
+            rows[d] = rows[d] * scale
+            scale = scale * self.inverse
+        return rows
 
 
-@njit(**_OPTIONS)
-def _march_block(state, begin, table, cells, start, inverse, step, first, last):
-    """March the block of rays that begins at `begin`."""
-    mask = cells - 1
-    half = 0.5 * step
-    both = state.shape[0] == MATRIX_ROWS
-    end = begin + BLOCK
-    y, p, s = state[0, begin:end], state[1, begin:end], state[2, begin:end]
-    a, c, m = state[3, begin:end], state[4, begin:end], state[5, begin:end]
-    for n in range(first, last):
-        drift = half if n == first else step
-        base = n * cells * CELL
-        if both:
-            b, d = state[6, begin:end], state[7, begin:end]
-            _advance_matrix(y, p, s, a, c, m, b, d, table, base, drift, step, start, inverse, mask)
-        else:
-            _advance_front(y, p, s, a, c, m, table, base, drift, step, start, inverse, mask)
-    for i in range(BLOCK):
-        before = a[i]
-        a[i] = before + half * c[i]
-        m[i] += 1.0 if a[i] * before < 0.0 else 0.0
-        y[i] += half * p[i]
-        s[i] += 0.5 * half * p[i] * p[i]
-    if both:
-        for i in range(begin, end):
-            state[6, i] += half * state[7, i]
+class _Processor:
+    """The flow of G = c (W_x + p W_y), c = step**2/24: a kick by c W_x, then the lift of y -> y + c W_y."""
+
+    def __init__(self, y, potential, gradient, strength):
+        self.strength = strength
+        self.value, self.kick, half_turn = gradient.at(y, 2)
+        _, self.slope, half_bend, self.sixth = potential.at(y, 3)
+        self.stretch = 1.0 + strength * (2.0 * half_bend)
+        self.turn = strength * (2.0 * half_turn)
+
+    def shear(self, p):
+        """Return p times the derivative of 1/stretch, up to its sign; p after the kick."""
+        return p * (self.strength * (6.0 * self.sixth)) / (self.stretch * self.stretch)
 
 
-@njit(**_OPTIONS)
-def _spline(table, y, start, inverse, mask):
-    """Return W and its first three derivatives from a spline row."""
-    u = (y - start) * inverse
-    floor = np.floor(u)
-    t = u - floor
-    j = CELL * (int64(floor) & mask)
-    w0 = look_up(table, j)
-    w1 = look_up(table, j + 1)
-    w2 = look_up(table, j + 2)
-    w3 = look_up(table, j + 3)
-    w4 = look_up(table, j + 4)
-    w5 = look_up(table, j + 5)
-    value = w0 + t * (w1 + t * (w2 + t * (w3 + t * (w4 + t * w5))))
-    first = w1 + t * (2.0 * w2 + t * (3.0 * w3 + t * (4.0 * w4 + t * 5.0 * w5)))
-    second = 2.0 * w2 + t * (6.0 * w3 + t * (12.0 * w4 + t * 20.0 * w5))
-    third = 6.0 * w3 + t * (24.0 * w4 + t * 60.0 * w5)
-    return value, first * inverse, second * inverse * inverse, third * inverse * inverse * inverse
+def _zero(context):
+    """Return the whole number 0."""
+    return context.get_constant(types.intp, 0)
 
 
-@njit(**_OPTIONS)
-def _process_rays(y_, p_, s_, work, potential, gradient, start, inverse, mask, strength):
-    """Turn y, p, action of a block from the kernel map's to true; put stretch, turn and shear of tangents in `work`."""
-    stretch_, turn_, shear_ = work[0], work[1], work[2]
-    for i in range(BLOCK):
-        y = get(y_, i)
-        value, first, second, _ = _spline(gradient, y, start, inverse, mask)
-        _, slope, bend, third = _spline(potential, y, start, inverse, mask)
-        p = get(p_, i) - strength * first
-        stretch = 1.0 + strength * bend
-        put(y_, i, y + strength * slope)
-        put(p_, i, p / stretch)
-        put(s_, i, get(s_, i) - strength * value)
-        put(stretch_, i, stretch)
-        put(turn_, i, strength * second)
-        put(shear_, i, p * strength * third / (stretch * stretch))
+def _signature(kinds, arrays, doubles):
+    """Return the signature of an intrinsic: arrays and whole numbers as given, then doubles, then the mask."""
+    return types.void(*kinds[:arrays], *[types.float64] * doubles, types.intp)
 
 
-@njit(**_OPTIONS)
-def _process_tangent(a_, c_, work):
-    """Turn one tangent of a block from the kernel map's to true."""
-    stretch_, turn_, shear_ = work[0], work[1], work[2]
-    for i in range(BLOCK):
-        a = get(a_, i)
-        stretch = get(stretch_, i)
-        put(c_, i, (get(c_, i) - get(turn_, i) * a) / stretch - get(shear_, i) * a)
-        put(a_, i, stretch * a)
+def _stepping(rows):
+    """Return the code of drift and kick for eight rays of a state with this many rows."""
+
+    def generate(context, builder, signature, args):
+        state, column, table, base, drift, kick, start, inverse, mask = args
+        address = row_addresses(context, builder, signature.args[0], state, column)
+        drift, kick = spread(builder, drift), spread(builder, kick)
+        y, p, action = (load(builder, address(row)) for row in range(3))
+        y = y + drift * p
+        value, slope, half_bend = _Row(context, builder, signature.args[2], table, base, start, inverse, mask).at(y, 2)
+        turn = kick * (2.0 * half_bend)
+        for first, second in _TANGENTS[rows]:
+            before, c = load(builder, address(first)), load(builder, address(second))
+            a = before + drift * c
+            store(a, address(first))
+            store(c - turn * a, address(second))
+            if first == 3:
+                store(load(builder, address(5)) + (a * before).below_zero(1.0, 0.0), address(5))
+        store(y, address(0))
+        store(p - kick * slope, address(1))
+        store(action + 0.5 * drift * p * p - kick * value, address(2))
+        return context.get_dummy_value()
+
+    return generate
 
 
-@njit(**_OPTIONS)
-def _settle(a_, c_, m_):
-    """Make the Maslov index of a block agree with the sign of the true A.
+def _closing(rows):
+    """Return the code of the half drift that ends a step, and of the processor, for eight rays."""
+
+    def generate(context, builder, signature, args):
+        state, true, column, potential, gradient, half, strength, start, inverse, mask = args
+        here = row_addresses(context, builder, signature.args[0], state, column)
+        there = row_addresses(context, builder, signature.args[1], true, column)
+        zero = _zero(context)
+        half, strength = spread(builder, half), spread(builder, strength)
+        w, w_x = (
+            _Row(context, builder, kind, table, zero, start, inverse, mask)
+            for kind, table in zip(signature.args[3:5], (potential, gradient), strict=True)
+        )
+        y, p, action = (load(builder, here(row)) for row in range(3))
+        y, action = y + half * p, action + 0.5 * half * p * p
+        store(y, here(0))
+        store(action, here(2))
+        processor = _Processor(y, w, w_x, strength)
+        p = p - strength * processor.kick
+        shear = processor.shear(p)
+        store(y + strength * processor.slope, there(0))
+        store(p / processor.stretch, there(1))
+        store(action - strength * processor.value, there(2))
+        for first, second in _TANGENTS[rows]:
+            before, c = load(builder, here(first)), load(builder, here(second))
+            a = before + half * c
+            store(a, here(first))
+            true_a = processor.stretch * a
+            true_c = (c - processor.turn * a) / processor.stretch - shear * a
+            store(true_a, there(first))
+            store(true_c, there(second))
+            if first == 3:
+                maslov = load(builder, here(5)) + (a * before).below_zero(1.0, 0.0)
+                store(maslov, here(5))
+                store(_settled(maslov, true_a, true_c), there(5))
+        return context.get_dummy_value()
+
+    return generate
+
+
+def _settled(maslov, a, c):
+    """Return the Maslov index made to agree with the sign of the true A.
 
     It is counted on the kernel map, whose caustics lie O(step**2) from the true ones; behind a caustic A and C have one
     sign, before it they have opposite signs.
     """
-    for i in range(BLOCK):
-        a, m = get(a_, i), get(m_, i)
-        even = np.floor(0.5 * m) * 2.0 == m
-        change = 1.0 if a * get(c_, i) > 0.0 else -1.0
-        put(m_, i, m + (change if (a < 0.0 if even else a > 0.0) else 0.0))
+    odd = maslov - 2.0 * (0.5 * maslov).floor()
+    change = (a * c * -1.0).below_zero(1.0, -1.0)
+    return maslov + (a * (1.0 + -2.0 * odd)).below_zero(change, 0.0)
 
 
-@njit(**_OPTIONS)
-def _unprocess_rays(y_, p_, s_, work, potential, gradient, start, inverse, mask, strength):
-    """Undo `_process_rays`."""
-    stretch_, turn_, shear_ = work[0], work[1], work[2]
-    for i in range(BLOCK):
-        true = get(y_, i)
+def _opening(rows):
+    """Return the code that undoes the processor for eight rays."""
+
+    def generate(context, builder, signature, args):
+        state, column, potential, gradient, strength, start, inverse, mask = args
+        address = row_addresses(context, builder, signature.args[0], state, column)
+        zero = _zero(context)
+        strength = spread(builder, strength)
+        w, w_x = (
+            _Row(context, builder, kind, table, zero, start, inverse, mask)
+            for kind, table in zip(signature.args[2:4], (potential, gradient), strict=True)
+        )
+        true, p, action = (load(builder, address(row)) for row in range(3))
         y = true
         for _ in range(NEWTON_STEPS):
-            _, slope, bend, _ = _spline(potential, y, start, inverse, mask)
-            y -= (y + strength * slope - true) / (1.0 + strength * bend)
-        _, _, bend, third = _spline(potential, y, start, inverse, mask)
-        value, first, second, _ = _spline(gradient, y, start, inverse, mask)
-        stretch = 1.0 + strength * bend
-        p = get(p_, i) * stretch
-        put(y_, i, y)
-        put(p_, i, p + strength * first)
-        put(s_, i, get(s_, i) + strength * value)
-        put(stretch_, i, stretch)
-        put(turn_, i, strength * second)
-        put(shear_, i, p * strength * third / (stretch * stretch))
+            _, slope, half_bend = w.at(y, 2)
+            y = y - (y + strength * slope - true) / (1.0 + strength * (2.0 * half_bend))
+        processor = _Processor(y, w, w_x, strength)
+        p = p * processor.stretch
+        shear = processor.shear(p)
+        store(y, address(0))
+        store(p + strength * processor.kick, address(1))
+        store(action + strength * processor.value, address(2))
+        for first, second in _TANGENTS[rows]:
+            a = load(builder, address(first)) / processor.stretch
+            c = load(builder, address(second))
+            store(a, address(first))
+            store((c + shear * a) * processor.stretch + processor.turn * a, address(second))
+        return context.get_dummy_value()
+
+    return generate
+
+
+@intrinsic
+def step_front(typingctx, state, column, table, base, drift, kick, start, inverse, mask):  # noqa: ARG001
+    """Drift, then kick eight rays with one tangent, from `column` on."""
+    return _signature((state, types.intp, table, types.intp), 4, 4), _stepping(FRONT_ROWS)
+
+
+@intrinsic
+def step_matrix(typingctx, state, column, table, base, drift, kick, start, inverse, mask):  # noqa: ARG001
+    """Drift, then kick eight rays with both tangents, from `column` on."""
+    return _signature((state, types.intp, table, types.intp), 4, 4), _stepping(MATRIX_ROWS)
+
+
+@intrinsic
+def close_front(typingctx, state, true, column, potential, gradient, half, strength, start, inverse, mask):  # noqa: ARG001
+    """End the step of eight rays with one tangent, and give their true coordinates."""
+    return _signature((state, true, types.intp, potential, gradient), 5, 4), _closing(FRONT_ROWS)
+
+
+@intrinsic
+def close_matrix(typingctx, state, true, column, potential, gradient, half, strength, start, inverse, mask):  # noqa: ARG001
+    """End the step of eight rays with both tangents, and give their true coordinates."""
+    return _signature((state, true, types.intp, potential, gradient), 5, 4), _closing(MATRIX_ROWS)
+
+
+@intrinsic
+def open_front(typingctx, state, column, potential, gradient, strength, start, inverse, mask):  # noqa: ARG001
+    """Turn eight rays with one tangent from true coordinates to the kernel map's."""
+    return _signature((state, types.intp, potential, gradient), 4, 3), _opening(FRONT_ROWS)
+
+
+@intrinsic
+def open_matrix(typingctx, state, column, potential, gradient, strength, start, inverse, mask):  # noqa: ARG001
+    """Turn eight rays with both tangents from true coordinates to the kernel map's."""
+    return _signature((state, types.intp, potential, gradient), 4, 3), _opening(MATRIX_ROWS)
 
 
 @njit(**_OPTIONS)
-def _unprocess_tangent(a_, c_, work):
-    """Undo `_process_tangent`."""
-    stretch_, turn_, shear_ = work[0], work[1], work[2]
-    for i in range(BLOCK):
-        stretch = get(stretch_, i)
-        a = get(a_, i) / stretch
-        put(c_, i, (get(c_, i) + get(shear_, i) * a) * stretch + get(turn_, i) * a)
-        put(a_, i, a)
+def _march_block(state, true, begin, kicks, w, w_x, row, start, inverse, mask, step, strength, first, last):
+    """Take a block of rays from one screen to the next."""
+    end, half = begin + BLOCK, 0.5 * step
+    both = state.shape[0] == MATRIX_ROWS
+    for n in range(first, last):
+        drift = half if n == first else step
+        if both:
+            for i in range(begin, end, LANES):
+                step_matrix(state, i, kicks, n * row, drift, step, start, inverse, mask)
+        else:
+            for i in range(begin, end, LANES):
+                step_front(state, i, kicks, n * row, drift, step, start, inverse, mask)
+    if both:
+        for i in range(begin, end, LANES):
+            close_matrix(state, true, i, w, w_x, half, strength, start, inverse, mask)
+    else:
+        for i in range(begin, end, LANES):
+            close_front(state, true, i, w, w_x, half, strength, start, inverse, mask)
 
 
 @njit(parallel=True, **_OPTIONS)
@@ -239,32 +271,23 @@ def march_screens(state, true, kicks, potential, gradient, cells, start, inverse
         Steps per screen.
     first : int
     """
-    rows = state.shape[0]
+    row, mask = cells * CELL, cells - 1
     for block in prange(state.shape[1] // BLOCK):
         begin = block * BLOCK
-        end = begin + BLOCK
-        work = np.empty((3, BLOCK))
         for n in range(true.shape[0]):
             screen = first + n
-            _march_block(state, begin, kicks, cells, start, inverse, step, screen * steps, (screen + 1) * steps)
-            for row in range(rows):
-                for i in range(begin, end):
-                    true[n, row, i] = state[row, i]
-            seen = true[n, :, begin:end]
             w, w_x = potential[screen + 1], gradient[screen + 1]
-            _process_rays(seen[0], seen[1], seen[2], work, w, w_x, start, inverse, cells - 1, strength)
-            _process_tangent(seen[3], seen[4], work)
-            _settle(seen[3], seen[4], seen[5])
-            if rows == MATRIX_ROWS:
-                _process_tangent(seen[6], seen[7], work)
+            from_kick, to_kick = screen * steps, (screen + 1) * steps
+            _march_block(
+                state, true[n], begin, kicks, w, w_x, row, start, inverse, mask, step, strength, from_kick, to_kick
+            )
 
 
 @njit(parallel=True, **_OPTIONS)
 def from_true(state, potential, gradient, cells, start, inverse, strength):
     """Turn true coordinates into those of the kernel map, in place.
 
-    The inverse, to round-off, of what `march_screens` does on a screen: the flow of G = c (W_x + p W_y),
-    c = strength = step**2/24, as a kick by c W_x and then the lift of y -> y + c W_y.
+    The inverse, to round-off, of what `march_screens` does on a screen.
 
     Parameters
     ----------
@@ -275,9 +298,8 @@ def from_true(state, potential, gradient, cells, start, inverse, strength):
         As for `march_screens`.
     """
     for block in prange(state.shape[1] // BLOCK):
-        part = state[:, block * BLOCK : (block + 1) * BLOCK]
-        work = np.empty((3, BLOCK))
-        _unprocess_rays(part[0], part[1], part[2], work, potential, gradient, start, inverse, cells - 1, strength)
-        _unprocess_tangent(part[3], part[4], work)
-        if state.shape[0] == MATRIX_ROWS:
-            _unprocess_tangent(part[6], part[7], work)
+        for i in range(block * BLOCK, (block + 1) * BLOCK, LANES):
+            if state.shape[0] == MATRIX_ROWS:
+                open_matrix(state, i, potential, gradient, strength, start, inverse, cells - 1)
+            else:
+                open_front(state, i, potential, gradient, strength, start, inverse, cells - 1)

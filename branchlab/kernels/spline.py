@@ -1,5 +1,7 @@
 """Periodic quintic splines in polynomial form: the tables that ray steps look up."""
 
+import math
+
 import numpy as np
 from numba import njit
 
@@ -25,17 +27,27 @@ def _polynomials(weights, cells):
             cell[6] = cell[7] = 0.0
 
 
-def quintic_cells(samples) -> np.ndarray:
+def empty_cells(*shape) -> np.ndarray:
+    """Return room for cells, shape (*shape, CELL), each on its own cache line."""
+    size = math.prod(shape) * CELL
+    room = np.empty(size + CELL)
+    first = -(room.__array_interface__["data"][0] // room.itemsize) % CELL
+    return room[first : first + size].reshape(*shape, CELL)
+
+
+def quintic_cells(samples, out=None) -> np.ndarray:
     """Return the quintic spline through periodic samples, as polynomials on cells.
 
     Parameters
     ----------
     samples : ndarray, shape (rows, n)
         Equidistant values over one period.
+    out : ndarray, shape (rows, n, CELL), optional
+        Where to put the cells.
 
     Returns
     -------
-    ndarray, shape (rows, n, 8)
+    ndarray, shape (rows, n, CELL)
         Coefficients of t**0 ... t**5 between sample j (t = 0) and j + 1 (t = 1), and two zeros of padding. The
         interpolation conditions are solved exactly, by dividing the transform by the B-spline's
         (66 + 52 cos w + 2 cos 2w)/120.
@@ -44,6 +56,6 @@ def quintic_cells(samples) -> np.ndarray:
     w = 2.0 * np.pi * np.arange(n // 2 + 1) / n
     gain = (66.0 + 52.0 * np.cos(w) + 2.0 * np.cos(2.0 * w)) / 120.0
     weights = np.fft.irfft(np.fft.rfft(samples, axis=-1) / gain, n=n, axis=-1)
-    cells = np.empty((*samples.shape, CELL))
-    _polynomials(weights, cells)
-    return cells
+    out = empty_cells(*samples.shape) if out is None else out
+    _polynomials(weights, out)
+    return out

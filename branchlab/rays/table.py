@@ -5,7 +5,7 @@ import math
 import numpy as np
 
 from branchlab.errors import RangeError, check_memory
-from branchlab.kernels.spline import CELL, quintic_cells
+from branchlab.kernels.spline import CELL, empty_cells, quintic_cells
 
 POINTS_PER_SCALE = 8  # quintic splines this dense: relative rms errors 2.5e-7, 3.6e-6, 6.9e-5 of v, v_y, v_yy
 STEPS_PER_SCALE = 4
@@ -74,14 +74,15 @@ class KickTable:
         self.strength = self.step**2 / 24.0
         self.cells, self.inverse = n, n / window.span
         self.start = window.points(n)[0]
-        self.kicks = np.empty((steps, n * CELL))
+        cells = empty_cells(steps, n)
         middles = (np.arange(steps) + 0.5) * self.step
         inside = np.abs(window.points(n)) <= 0.5 * setup.width
         for at in range(0, steps, ROWS_AT_ONCE):
             v = window.rows(middles[at : at + ROWS_AT_ONCE], n)
             _refuse_walls(v[:, inside], middles[at : at + ROWS_AT_ONCE], window.points(n)[inside])
             corrected = 0.5 * v - self.strength * (0.5 * _slope(v, window.span)) ** 2
-            self.kicks[at : at + ROWS_AT_ONCE] = quintic_cells(corrected).reshape(v.shape[0], -1)
+            quintic_cells(corrected, cells[at : at + ROWS_AT_ONCE])
+        self.kicks = cells.reshape(steps, -1)
         self.potential = quintic_cells(0.5 * window.rows(screens, n)).reshape(screens.size, -1)
         self.gradient = quintic_cells(0.5 * window.rows(screens, n, dx=1)).reshape(screens.size, -1)
 
