@@ -21,6 +21,9 @@ def main(arguments=None) -> int:
     except BranchlabError as slip:
         print(f"branchlab: {slip}", file=sys.stderr)
         return 2
+    except MemoryError as fault:
+        print(f"branchlab: the memory of this machine is too small: {fault}. Use fewer screens or cells.", file=sys.stderr)
+        return 2
     except KeyboardInterrupt:
         print("branchlab: stopped before a realisation was finished; nothing is written.", file=sys.stderr)
         return 130

@@ -12,10 +12,11 @@ from tqdm import tqdm
 from branchlab.cli.files import check_target, partial
 from branchlab.errors import BranchlabWarning, InputError, check_integer, check_number, check_positive
 from branchlab.launch import Band
+from branchlab.media import SampledMedium
 from branchlab.media.settings import CAUTION
 from branchlab.page import draw_study
 from branchlab.results import save
-from branchlab.studies import Study, default_study, own_study, read_medium, table
+from branchlab.studies import Study, default_study, own_study, table
 from branchlab.studies.own import BANDWIDTH, CAUTIONS
 
 NEEDS_MEDIUM = ("variable", "kind", "reference", "along", "across", "width", "sides")
@@ -123,13 +124,13 @@ def _own(given) -> Study:
         text = getattr(given, name)
         return None if text is None else _number(name, text)
 
-    medium, unit = read_medium(
+    medium = SampledMedium.from_netcdf(
         given.medium,
         given.variable,
         given.kind,
         reference=optional("reference"),
-        along=given.along or "x",
-        across=given.across or "y",
+        x=given.along or "x",
+        y=given.across or "y",
     )
     bandwidth = BANDWIDTH if given.bandwidth is None else check_number("--bandwidth", optional("bandwidth"), low=0.0)
     return own_study(
@@ -141,7 +142,6 @@ def _own(given) -> Study:
         sides=given.sides or "periodic",
         resolution=optional("resolution"),
         threshold=0.15 if given.threshold is None else _number("threshold", given.threshold),
-        length_unit=unit,
         title=f"{given.variable} of {pathlib.Path(given.medium).name}",
         note=CAUTIONS.get(given.kind, ""),
     )

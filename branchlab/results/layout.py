@@ -74,6 +74,8 @@ NAMES = {
     "scintillation": ("1", "scintillation index"),
     "scintillation_ray": ("1", "scintillation index of the rays, at the resolution"),
     "scintillation_wave": ("1", "scintillation index of the wave, at the resolution"),
+    "wave_parameter": ("1", "kappa = 3 k Dtheta D**(-2/3): rays fail by it and by x/z_c alone"),
+    "mean_first_caustic": ("L", "mean first caustic of a plane wave, weak-fluctuation limit"),
     "scintillation_band": ("1", "scintillation index of the band average, at the resolution"),
     "resolved": ("1", "mismatch is above the numerical error"),
     "interference": ("I", "semiclassical sum minus ray density"),

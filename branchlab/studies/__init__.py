@@ -1,8 +1,8 @@
 """Studies: a setup, its wavelengths and its realisations, run to the verdict."""
 
 from branchlab.studies.default import default_study
-from branchlab.studies.own import own_study, read_medium
+from branchlab.studies.own import own_study
 from branchlab.studies.study import Study, study_of
 from branchlab.studies.table import table
 
-__all__ = ["Study", "default_study", "own_study", "read_medium", "study_of", "table"]
+__all__ = ["Study", "default_study", "own_study", "study_of", "table"]

@@ -1,21 +1,16 @@
 """A study of somebody's own medium: what the samples leave open is chosen here, and told."""
 
 import math
-import pathlib
 
-import xarray as xr
-
-from branchlab.errors import InputError, check_positive
+from branchlab.errors import check_positive
 from branchlab.launch import Band, PlaneWave, Setup
 from branchlab.launch.setup import FADE_SCALES, smooth_number
 from branchlab.media import SampledMedium
-from branchlab.media.sampled import read_samples
 from branchlab.studies.study import Study
 
 BANDWIDTH = 0.4
 PER_SCALE = 10.0  # default resolution: this many in a scale of the medium
 CELLS_IN_RESOLUTION = 1.6
-PLAIN = ("", "1", "dimensionless", "none")
 CAUTIONS = {
     "depth": "Linear long waves, no rotation, no breaking: wavelengths below 20 depths are outside it (common practice).",
     "speed": "Linear waves without loss.",
@@ -32,7 +27,6 @@ def own_study(
     sides: str = "periodic",
     resolution: float | None = None,
     threshold: float = 0.15,
-    length_unit: str = "1",
     title: str = "",
     note: str = "",
 ) -> Study:
@@ -52,8 +46,8 @@ def own_study(
     sides : {"periodic", "absorbing"}
     resolution : float, optional
         Default: a tenth of the medium's scale.
-    threshold, length_unit, title, note :
-        See `Study` and `Setup`.
+    threshold, title, note :
+        See `Study`.
     """
     medium = medium.with_(x=medium.x - medium.x[0], y=medium.y - 0.5 * (medium.y[0] + medium.y[-1]))
     span = float(medium.y[-1] - medium.y[0])
@@ -68,7 +62,15 @@ def own_study(
     fewest = max(16.0 / medium.scale, CELLS_IN_RESOLUTION / resolution) * check_positive("width", width)
     items = list(wavelengths) if isinstance(wavelengths, (list, tuple)) else [wavelengths]
     return Study(
-        Setup(medium, PlaneWave(), length, width, sides, cells=smooth_number(round(fewest)), length_unit=length_unit),
+        Setup(
+            medium,
+            PlaneWave(),
+            length,
+            width,
+            sides,
+            cells=smooth_number(round(fewest)),
+            length_unit=medium.length_unit,
+        ),
         items if bandwidth is None else [Band(one, bandwidth) for one in items],
         resolution=resolution,
         threshold=threshold,
@@ -81,45 +83,3 @@ def _rounded(value: float, way) -> float:
     """Return a number with three significant digits, rounded by `floor` or `round`."""
     unit = 10.0 ** (math.floor(math.log10(value)) - 2)
     return float(f"{way(value / unit) * unit:.6g}")
-
-
-def read_medium(
-    path, variable: str, kind: str, *, reference: float | None = None, along: str = "x", across: str = "y"
-) -> tuple[SampledMedium, str]:
-    """Return the medium in a netCDF file, and the unit of its axes.
-
-    Parameters
-    ----------
-    path : path
-    variable : str
-    kind : {"v", "index", "speed", "depth"}
-    reference : float, optional
-        See `SampledMedium`; in the unit of the variable.
-    along, across : str
-        Names of the dimensions along and across the way of the wave.
-
-    Raises
-    ------
-    InputError
-        As `SampledMedium`; axes in degrees; a variable of index or v that has a unit.
-    """
-    samples = read_samples(pathlib.Path(path), variable)
-    medium = SampledMedium.from_dataarray(samples, kind, reference=reference, x=along, y=across)
-    return medium, _unit(samples, variable, kind, (along, across))
-
-
-def _unit(samples: xr.DataArray, variable: str, kind: str, axes) -> str:
-    """Return the unit of the axes; refuse units that cannot be meant."""
-    units = [str(samples[axis].attrs.get("units", "1")).strip() for axis in axes]
-    for axis, unit in zip(axes, units, strict=True):
-        if unit.lower().startswith("degree"):
-            raise InputError(
-                f"{axis} is in {unit!r}; the axes must be lengths. Project the samples to an even grid in metres or "
-                "kilometres first."
-            )
-    own = str(samples.attrs.get("units", "1")).strip()
-    if kind in ("v", "index") and own.lower() not in PLAIN:
-        raise InputError(
-            f"{variable!r} is in {own!r}, and kind {kind!r} has no unit. Use kind='speed' or kind='depth' for such values."
-        )
-    return next((unit for unit in units if unit.lower() not in PLAIN), "1")

@@ -11,7 +11,7 @@ import xarray as xr
 
 from branchlab.compare import compare, scintillation, validity_range, verdict
 from branchlab.compare.smoothing import check_resolution
-from branchlab.conventions import REALISATION, WAVELENGTH, X
+from branchlab.conventions import REALISATION, WAVELENGTH, X, wave_parameter, wavenumber
 from branchlab.errors import (
     BranchlabWarning,
     InputError,
@@ -22,6 +22,7 @@ from branchlab.errors import (
     check_positive,
 )
 from branchlab.launch import Band, Setup
+from branchlab.media import SampledMedium
 from branchlab.rays import RayEnsemble
 from branchlab.results import labelled
 from branchlab.semiclassics import SemiclassicalSum
@@ -123,6 +124,11 @@ class Study(ValueObject):
         """The bands, or none."""
         return self.wavelengths if isinstance(self.wavelengths[0], Band) else ()
 
+    @property
+    def centres(self) -> list[float]:
+        """The wavelengths, or the centres of the bands."""
+        return [band.centre for band in self.bands] or list(self.wavelengths)
+
     def solved_wavelengths(self) -> np.ndarray:
         """Return every wavelength that is marched: the wavelengths, or the nodes of all bands, rising."""
         if self.bands:
@@ -180,7 +186,7 @@ class Study(ValueObject):
 
     def _scintillation(self, rays, wave) -> dict:
         """Return the scintillation index of rays, wave and averages, at the resolution."""
-        centres = [band.centre for band in self.bands] or list(self.wavelengths)
+        centres = self.centres
         index = {
             "scintillation_ray": scintillation(rays, resolution=self.resolution),
             "scintillation_wave": scintillation(wave, resolution=self.resolution).sel(
@@ -193,6 +199,28 @@ class Study(ValueObject):
             found["scintillation_band"] = labelled("scintillation_band", np.array(rows), (WAVELENGTH, X))
         return found
 
+    def yardsticks(self) -> dict[str, xr.Variable]:
+        """Return what the validity range is measured against: mean_first_caustic, and wave_parameter per wavelength.
+
+        As asked for of a random medium, as measured of a sampled one; nothing for other media.
+        """
+        medium, setup = self.setup.medium, self.setup
+        numbers = medium.statistics(length=setup.length, width=setup.width)
+        start = "requested_" if "requested_curvature_noise" in numbers else ""
+        if not start and not isinstance(medium, SampledMedium):
+            return {}
+        diffusion, noise, caustic = (
+            float(numbers[start + name]) for name in ("angle_diffusion", "curvature_noise", "mean_first_caustic")
+        )
+        if not (np.isfinite(noise) and noise > 0):
+            return {}
+        k = wavenumber(np.array(self.centres))
+        unit = {"length_unit": setup.length_unit}
+        return {
+            "wave_parameter": labelled("wave_parameter", wave_parameter(k, diffusion, noise), (WAVELENGTH,)),
+            "mean_first_caustic": labelled("mean_first_caustic", caustic, (), **unit),
+        }
+
     def run(self, progress=None) -> xr.Dataset:
         """Compare rays, wave and sum in every realisation and find the validity range.
 
@@ -204,8 +232,8 @@ class Study(ValueObject):
         Returns
         -------
         Dataset of kind "comparison"
-            The comparisons of all realisations, joined along `realisation` (no such dimension without seeds), with
-            the variables of `validity_range`. Attributes: `study` (JSON, the setup aside), `verdict` (the answer in
+            The comparisons of all realisations, joined along `realisation` (no such dimension without seeds), with the
+            variables of `validity_range` and `yardsticks`. Attributes: `study` (JSON, the setup aside), `verdict` (the answer in
             words), `failed` (JSON: what went wrong, by seed), `stopped` (1 after Ctrl-C), `fingerprint`, `threshold`,
             `persistence`, `confidence`.
 
@@ -273,6 +301,7 @@ class Study(ValueObject):
         found = validity_range(result, threshold=self.threshold)
         words = verdict(result, found)
         result = result.assign({name: found[name] for name in found.data_vars if name.startswith(RESULTS)})
+        result = result.assign(self.yardsticks())
         fields = self.to_dict()
         del fields["setup"]  # it is an attribute of its own already
         result.attrs |= {name: found.attrs[name] for name in ("threshold", "persistence", "confidence")}

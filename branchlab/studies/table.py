@@ -1,7 +1,5 @@
 """The numbers behind a verdict, as a table of plain text."""
 
-import json
-
 import numpy as np
 import xarray as xr
 
@@ -14,6 +12,10 @@ PARTS = ("removable", "caustic", "interference", "diffraction")
 def _number(value: float) -> str:
     """Return a number with three significant digits."""
     return np.format_float_positional(float(f"{value:.3g}"), trim="-")
+
+
+def _with_unit(value: float, unit: str) -> str:
+    return _number(value) + ("" if unit == "1" else f" {unit}")
 
 
 def _share(value: float) -> str:
@@ -43,27 +45,34 @@ def table(result: xr.Dataset) -> str:
     Returns
     -------
     str
-        Lines of equal layout. Parts are portions of the misplaced flux that add up to it; means over realisations.
+        One column each. Parts are portions of the misplaced flux that add up to it; means over realisations.
     """
     check(result, "comparison")
     end, unit = float(result[X].values[-1]), result.attrs["length_unit"]
-    bands = json.loads(result.attrs.get("bands", "[]"))
-    parts = [name for name in PARTS if f"misplaced_{name}" in result]
+    places = range(result.sizes[WAVELENGTH])
     in_unit = "" if unit == "1" else f" [{unit}]"
-    head = ["wavelength" + in_unit, "range" + in_unit, *(["band average" + in_unit] if bands else [])]
-    head += [f"misplaced at {_number(end)}", *(f"{'=+'[i > 0]} {name}" for i, name in enumerate(parts)), "num. error"]
-    lines = [head]
-    for at, wavelength in enumerate(result[WAVELENGTH].values):
-        one = result.isel({WAVELENGTH: at})
 
-        def last(name, one=one):
-            return _share(float(one[name].isel({X: -1}).mean()))
+    def at_end(name):
+        means = result[name].isel({X: -1}).mean(set(result[name].dims) - {WAVELENGTH, X})
+        return [_share(float(value)) for value in means.values]
 
-        line = [
-            _number(wavelength),
-            *(_reach(result, at, ending, end) for ending in (["", "_band"] if bands else [""])),
-        ]
-        line += [last("misplaced_flux"), *(last(f"misplaced_{name}") for name in parts)]
-        lines.append([*line, _share(float(one["numerical_error"].max()))])
-    widths = [max(len(line[i]) for line in lines) for i in range(len(head))]
-    return "\n".join("  ".join(cell.rjust(width) for cell, width in zip(line, widths, strict=True)) for line in lines)
+    columns = {"wavelength" + in_unit: [_number(value) for value in result[WAVELENGTH].values]}
+    if "wave_parameter" in result:
+        columns["kappa"] = [_number(value) for value in result["wave_parameter"].values]
+    columns["range" + in_unit] = [_reach(result, at, "", end) for at in places]
+    if "bands" in result.attrs:
+        columns["band average" + in_unit] = [_reach(result, at, "_band", end) for at in places]
+    columns[f"misplaced at {_with_unit(end, unit)}"] = at_end("misplaced_flux")
+    for i, name in enumerate(one for one in PARTS if f"misplaced_{one}" in result):
+        columns[f"{'=+'[i > 0]} {name}"] = at_end(f"misplaced_{name}")
+    errors = result["numerical_error"].max(set(result["numerical_error"].dims) - {WAVELENGTH})
+    columns["num. error"] = [_share(float(value)) for value in errors.values]
+    widths = {head: max(len(head), *(len(cell) for cell in cells)) for head, cells in columns.items()}
+    lines = ["  ".join(head.rjust(width) for head, width in widths.items())]
+    lines += ["  ".join(columns[head][at].rjust(width) for head, width in widths.items()) for at in places]
+    if "wave_parameter" in result:
+        caustic = _with_unit(float(result["mean_first_caustic"]), unit)
+        lines.append(
+            f"kappa: wave parameter. Rays meet their first caustic at {caustic} on average (weak-fluctuation limit)."
+        )
+    return "\n".join(lines)
