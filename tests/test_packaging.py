@@ -6,6 +6,8 @@ import os
 import pathlib
 import pkgutil
 import re
+import subprocess
+import sys
 import tomllib
 
 import pytest
@@ -137,3 +139,25 @@ def test_paths_in_documents_exist(document):
     named = set(re.findall(r"`((?:branchlab|tests|notebooks|\.ci)/[\w./-]*)`", text))
     assert named
     assert [name for name in sorted(named) if not (ROOT / name).exists()] == []
+
+
+def commands_of(text):
+    return [line for block in blocks(text, "sh") for line in block.splitlines() if line.strip()]
+
+
+@pytest.mark.parametrize("command", commands_of((ROOT / "DEVELOPERS.md").read_text(encoding="utf-8")))
+def test_commands_of_the_guide_work(command):
+    """Commands that run tests find some; those that run the linter are run in tests/test_hygiene.py."""
+    for part in command.split(" && "):
+        tool, *arguments = part.split()
+        if tool == ".venv/bin/ruff":
+            assert arguments in (["check", "."], ["format", "--check", "."])
+            continue
+        assert [tool, *arguments[:2]] == [".venv/bin/python", "-m", "pytest"]
+        found = subprocess.run(
+            [sys.executable, "-m", "pytest", "--collect-only", "-q", *arguments[2:]],
+            cwd=ROOT,
+            capture_output=True,
+            text=True,
+        )
+        assert found.returncode == 0, found.stdout[-2000:]

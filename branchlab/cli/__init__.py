@@ -22,7 +22,9 @@ def main(arguments=None) -> int:
         print(f"branchlab: {slip}", file=sys.stderr)
         return 2
     except MemoryError as fault:
-        print(f"branchlab: the memory of this machine is too small: {fault}. Use fewer screens or cells.", file=sys.stderr)
+        print(
+            f"branchlab: the memory of this machine is too small: {fault}. Use fewer screens or cells.", file=sys.stderr
+        )
         return 2
     except KeyboardInterrupt:
         print("branchlab: stopped before a realisation was finished; nothing is written.", file=sys.stderr)
