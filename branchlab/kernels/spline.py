@@ -10,21 +10,18 @@ CELL = 8
 
 @njit(nogil=True, cache=True, error_model="numpy")
 def _polynomials(weights, cells):
-    """Turn B-spline weights (row, n) into the polynomials of the cells (row, n, CELL)."""
-    n = weights.shape[1]
-    for row in range(weights.shape[0]):
-        w = weights[row]
-        for j in range(n):
-            w0, w1, w2 = w[(j - 2) % n], w[(j - 1) % n], w[j]
-            w3, w4, w5 = w[(j + 1) % n], w[(j + 2) % n], w[(j + 3) % n]
-            cell = cells[row, j]
-            cell[0] = (w0 + w4 + 26.0 * (w1 + w3) + 66.0 * w2) / 120.0
-            cell[1] = (w4 - w0 + 10.0 * (w3 - w1)) / 24.0
-            cell[2] = (w0 + w4 + 2.0 * (w1 + w3) - 6.0 * w2) / 12.0
-            cell[3] = (w4 - w0 - 2.0 * (w3 - w1)) / 12.0
-            cell[4] = (w0 + w4 - 4.0 * (w1 + w3) + 6.0 * w2) / 24.0
-            cell[5] = (w5 - w0 + 5.0 * (w1 - w4) + 10.0 * (w3 - w2)) / 120.0
-            cell[6] = cell[7] = 0.0
+    """Turn B-spline weights, shape (rows, n + 5), two of them before the first cell, into cells (rows, n, CELL)."""
+    for row in range(cells.shape[0]):
+        for j in range(cells.shape[1]):
+            w0, w1, w2 = weights[row, j], weights[row, j + 1], weights[row, j + 2]
+            w3, w4, w5 = weights[row, j + 3], weights[row, j + 4], weights[row, j + 5]
+            cells[row, j, 0] = (w0 + w4 + 26.0 * (w1 + w3) + 66.0 * w2) / 120.0
+            cells[row, j, 1] = (w4 - w0 + 10.0 * (w3 - w1)) / 24.0
+            cells[row, j, 2] = (w0 + w4 + 2.0 * (w1 + w3) - 6.0 * w2) / 12.0
+            cells[row, j, 3] = (w4 - w0 - 2.0 * (w3 - w1)) / 12.0
+            cells[row, j, 4] = (w0 + w4 - 4.0 * (w1 + w3) + 6.0 * w2) / 24.0
+            cells[row, j, 5] = (w5 - w0 + 5.0 * (w1 - w4) + 10.0 * (w3 - w2)) / 120.0
+            cells[row, j, 6] = cells[row, j, 7] = 0.0
 
 
 def empty_cells(*shape) -> np.ndarray:
@@ -57,5 +54,5 @@ def quintic_cells(samples, out=None) -> np.ndarray:
     gain = (66.0 + 52.0 * np.cos(w) + 2.0 * np.cos(2.0 * w)) / 120.0
     weights = np.fft.irfft(np.fft.rfft(samples, axis=-1) / gain, n=n, axis=-1)
     out = empty_cells(*samples.shape) if out is None else out
-    _polynomials(weights, out)
+    _polynomials(np.concatenate([weights[:, -2:], weights, weights[:, :3]], axis=1), out)
     return out

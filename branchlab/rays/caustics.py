@@ -9,7 +9,10 @@ from branchlab.rays.march import RayState
 
 
 class CausticPoints(NamedTuple):
-    """Caustic points in the order of x, arrays of shape (caustic,)."""
+    """Caustic points in the order of x, arrays of shape (caustic,).
+
+    `ray` is the number of the ray that passes, `order` how many caustics it has passed then, this one included.
+    """
 
     x: np.ndarray
     y: np.ndarray
@@ -26,7 +29,7 @@ def _hermite(f0, f1, d0, d1, t):
 
 
 def _root(f0, f1, d0, d1):
-    """Return the zero in (0, 1) of cubics that change sign there (bisection and Newton, vectorised)."""
+    """Return a zero in (0, 1) of cubics that change sign there (Newton, safeguarded by bisection; vectorised)."""
     low, high = np.zeros_like(f0), np.ones_like(f0)
     t = f0 / (f0 - f1)
     for _ in range(60):
@@ -34,10 +37,12 @@ def _root(f0, f1, d0, d1):
         same = f * f0 > 0
         low, high = np.where(same, t, low), np.where(same, high, t)
         step = np.divide(f, slope, out=np.zeros_like(f), where=slope != 0)
-        new = np.where((t - step > low) & (t - step < high) & (slope != 0), t - step, 0.5 * (low + high))
-        if np.max(np.abs(new - t), initial=0.0) < 1e-15:
+        inside = (t - step >= low) & (t - step <= high) & (slope != 0)
+        new = np.where(inside, t - step, 0.5 * (low + high))
+        moved = np.max(np.abs(new - t), initial=0.0)
+        t = new
+        if moved < 1e-14:
             break
-        t = np.where(f == 0, t, new)
     return t
 
 
@@ -54,10 +59,15 @@ def caustic_points(states: Iterable[RayState]) -> CausticPoints:
             passed = np.zeros(state.y.size, dtype=np.int64)
         else:
             at = np.flatnonzero(before.A * state.A < 0.0)
-            h = state.x - before.x
-            t = _root(before.A[at], state.A[at], h * before.C[at], h * state.C[at])
-            y, slope = _hermite(before.y[at], state.y[at], h * before.p[at], h * state.p[at], t)
             passed[at] += 1
-            found.append((before.x + t * h, y, slope / h, at, passed[at].copy()))
+            ends = [one[at] for pair in zip(before[1:6], state[1:6], strict=True) for one in pair]
+            steps = np.full(at.size, before.x), np.full(at.size, state.x - before.x)
+            found.append((*ends, *steps, at, passed[at]))
         before = state
-    return CausticPoints(*(np.concatenate(column) for column in zip(*found, strict=True)))
+    columns = [np.concatenate(column) for column in zip(*found, strict=True)]
+    y0, y1, p0, p1, _, _, a0, a1, c0, c1, x, h, ray, order = columns
+    t = _root(a0, a1, h * c0, h * c1)
+    y, slope = _hermite(y0, y1, h * p0, h * p1, t)
+    points = CausticPoints(x + t * h, y, slope / h, ray, order)
+    in_order = np.argsort(points.x, kind="stable")
+    return CausticPoints(*(column[in_order] for column in points))

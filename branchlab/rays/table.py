@@ -9,6 +9,7 @@ from branchlab.kernels.spline import CELL, empty_cells, quintic_cells
 
 POINTS_PER_SCALE = 8  # quintic splines this dense: relative rms errors 2.5e-7, 3.6e-6, 6.9e-5 of v, v_y, v_yy
 STEPS_PER_SCALE = 4
+FADE_SCALES = 3.0  # a seam or taper of the window is as smooth as a medium of a third of its length
 ROWS_AT_ONCE = 256
 
 
@@ -63,7 +64,8 @@ class KickTable:
     def __init__(self, setup, steps_per_screen: int, points_per_scale: int = POINTS_PER_SCALE):
         window, screens = setup.window, setup.x
         steps = steps_per_screen * (screens.size - 1)
-        n = 1 << max(5, math.ceil(math.log2(points_per_scale * window.span / setup.medium.scale)))
+        finest = min(setup.medium.scale, window.fade / FADE_SCALES) if window.fade else setup.medium.scale
+        n = 1 << max(5, math.ceil(math.log2(points_per_scale * window.span / finest)))
         check_memory(
             8.0 * CELL * n * (steps + 2 * screens.size),
             f"the rays' table of {steps} steps and {n} points",
