@@ -177,7 +177,7 @@ def _maps(figure, places, result: xr.Dataset, at: int) -> None:
     step, cell = x[1] - x[0], y[1] - y[0]
     box = (x[0] - 0.5 * step, x[-1] + 0.5 * step, y[0] - 0.5 * cell, y[-1] + 0.5 * cell)
     both = np.concatenate([one["intensity_ray"].values[1:], one["intensity_wave"].values[1:]])
-    top, apart = float(np.quantile(both, 0.998)), float(np.quantile(np.abs(one["mismatch"].values), 0.998))
+    top, apart = float(np.quantile(both, 0.998)), float(np.quantile(np.abs(one["mismatch"].values), 0.998)) or 1.0
     even = LinearSegmentedColormap.from_list("intensity", INTENSITY, 512)
     signed = LinearSegmentedColormap.from_list("mismatch", MISMATCH, 512)
     wavelength = _length(one[WAVELENGTH].item(), unit)
@@ -235,7 +235,13 @@ def _curves(place, result: xr.Dataset) -> None:
     place.fill_between(x, 0.0, error, color=RULE, lw=0, zorder=1)
     place.axhline(100.0 * threshold, color=INK, lw=1.0, ls=(0, (4, 3)), zorder=2)
     place.annotate(
-        f"threshold {100 * threshold:.3g} %", (x[0], 100 * threshold), (5, 4), textcoords="offset points", fontsize=9.5
+        f"threshold {100 * threshold:.3g} %",
+        (x[0], 100 * threshold),
+        (5, 4),
+        textcoords="offset points",
+        fontsize=9.5,
+        zorder=7,
+        bbox={"boxstyle": "square,pad=0.1", "fc": PAPER, "ec": "none", "alpha": 0.75},
     )
     ends = []
     bands = "misplaced_flux_band" in result
