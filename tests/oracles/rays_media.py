@@ -51,3 +51,22 @@ class WhiteNoise(Medium):
             spectrum[1 : fit + 1] = 0.5 * n * waves[:fit]
             row[:] = np.fft.irfft(spectrum * (1j * 2 * np.pi * np.arange(n // 2 + 1) / self.period) ** dy, n)
         return v
+
+
+@value
+class Mirrored(Medium):
+    """Another medium seen from its far end: v(length - x, y)."""
+
+    medium: Medium
+    length: float = attrs.field(converter=float)
+
+    @property
+    def scale(self):
+        return self.medium.scale
+
+    @property
+    def period_y(self):
+        return self.medium.period_y
+
+    def rows(self, x, y, *, dx=0, dy=0):
+        return (-1) ** dx * self.medium.rows(self.length - check_axis("x", x), y, dx=dx, dy=dy)
