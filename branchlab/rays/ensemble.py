@@ -197,7 +197,7 @@ class RayEnsemble:
             (caustic_x, caustic_y), momentum, ray and order of every point.
         """
         launched, numbers, flux = self._launched(rays)
-        steps = self.marcher.table.steps_per_screen * (self.setup.x.size - 1)
+        steps = self.marcher.steps_per_screen * (self.setup.x.size - 1)
         fine = Marcher(self.setup.with_(screens=steps + 1), self.steps_per_scale)
         points = caustic_points(_paraxial(fine.march(launched), flux))
         if self.setup.sides == "absorbing":

@@ -82,11 +82,15 @@ class Marcher:
         self.steps_per_scale = steps_per_scale
         self.points_per_scale = points_per_scale
 
+    @property
+    def steps_per_screen(self) -> int:
+        """Equal steps from screen to screen."""
+        return self.setup.steps_per_screen(self.setup.medium.scale / self.steps_per_scale)
+
     @functools.cached_property
     def table(self) -> KickTable:
         """The medium's spline tables."""
-        longest = self.setup.medium.scale / self.steps_per_scale
-        return KickTable(self.setup, self.setup.steps_per_screen(longest), self.points_per_scale)
+        return KickTable(self.setup, self.steps_per_screen, self.points_per_scale)
 
     def march(self, rays: FrontRays, matrix: bool = False) -> Iterator[RayState]:
         """Yield the rays on every screen of the setup, the entry first.
