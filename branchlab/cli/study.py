@@ -221,8 +221,10 @@ def _run(study: Study, *, quiet: bool):
         warnings.simplefilter("once", BranchlabWarning)
         with tqdm(
             total=1.0,
-            disable=quiet or None,
-            bar_format="{desc}{percentage:3.0f} % |{bar:40}| {elapsed}, {remaining} left",
+            disable=quiet or None,  # None: no bar where stderr is not a terminal
+            bar_format="{percentage:3.0f} % |{bar:40}| {elapsed}, {remaining} left",
+            ncols=78,
+            miniters=0.0,
             leave=False,
         ) as bar:
             result = study.run(lambda fraction: bar.update(max(0.0, min(fraction, 1.0) - bar.n)))

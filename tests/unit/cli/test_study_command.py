@@ -1,10 +1,15 @@
 """`branchlab study`: what it prints and writes, files of other processes, slips, interruption."""
 
+import fcntl
 import json
+import os
 import pathlib
+import pty
 import re
+import struct
 import subprocess
 import sys
+import termios
 
 import numpy as np
 import pytest
@@ -58,6 +63,32 @@ def test_quiet_prints_the_verdict_only(capsys):
     out = capsys.readouterr().out
     assert out.startswith("At resolution")
     assert "A small block" not in out
+
+
+def test_progress_is_shown_on_a_terminal():
+    """On a pseudo-terminal of 40 x 100 the bar goes from 0 to 100 %; in a pipe there is none."""
+    small_file(wavelengths=[0.3])
+    command = [sys.executable, "-m", "branchlab", "study", "small.json", "--realisations", "1"]
+    ours, theirs = pty.openpty()
+    fcntl.ioctl(theirs, termios.TIOCSWINSZ, struct.pack("HHHH", 40, 100, 0, 0))
+    with subprocess.Popen(command, stderr=theirs, stdout=subprocess.DEVNULL) as process:
+        os.close(theirs)
+        shown = b""
+        while True:
+            try:
+                piece = os.read(ours, 4096)
+            except OSError:  # the other end is closed
+                break
+            if not piece:
+                break
+            shown += piece
+    os.close(ours)
+    assert process.returncode == 0
+    percents = [int(one) for one in re.findall(r"(\d+) % \|", shown.decode("utf-8"))]
+    assert percents[0] == 0
+    assert percents == sorted(percents)
+    assert len(set(percents)) > 2
+    assert subprocess.run(command, capture_output=True, text=True, check=True).stderr == ""
 
 
 def test_options_change_the_study():
