@@ -8,8 +8,9 @@ import numpy as np
 import xarray as xr
 
 from branchlab.conventions import CAUSTIC, PARAXIAL, RAY, X, Y
-from branchlab.errors import check_integer, check_memory, check_number, check_positive
+from branchlab.errors import InputError, check_integer, check_memory, check_number, check_positive
 from branchlab.kernels.tubes import lay_tubes
+from branchlab.launch import Setup
 from branchlab.launch.part import FrontRays
 from branchlab.rays.caustics import CausticPoints, caustic_points
 from branchlab.rays.front import TracedFront
@@ -41,6 +42,8 @@ class RayEnsemble:
     def __init__(
         self, setup, *, rays_per_scale: float = 32.0, most_rays: int = 1 << 17, steps_per_scale: int = STEPS_PER_SCALE
     ):
+        if not isinstance(setup, Setup):
+            raise InputError(f"setup must be a Setup; got {type(setup).__name__} {setup!r:.60}.")
         self.setup = setup
         self.rays_per_scale = check_positive("rays_per_scale", rays_per_scale)
         self.most_rays = check_integer("most_rays", most_rays, low=64)
@@ -83,7 +86,12 @@ class RayEnsemble:
             The front does not fit into memory.
         """
         setup = self.setup
-        wanted = setup.cell if resolution is None else check_number("resolution", resolution, low=setup.cell)
+        wanted = setup.cell if resolution is None else check_positive("resolution", resolution)
+        if wanted < setup.cell * (1.0 - 1e-9):
+            raise InputError(
+                f"resolution {wanted:g} is finer than the setup's cells, {setup.cell:g} (width {setup.width:g} over "
+                f"{setup.y.size} cells). Use resolution >= {setup.cell:g}, or a setup with more cells."
+            )
         coarser = Marcher(setup, max(1, self.steps_per_scale // 2), POINTS_PER_SCALE // 2)
         laid = np.zeros((setup.x.size, setup.y.size))
         rough = np.zeros_like(laid)

@@ -65,20 +65,22 @@ class TracedFront:
         ends = np.arange(s.size - 1), np.arange(1, s.size)
         (s0, s1), (y0, y1), (a0, a1) = ([row[..., end] for end in ends] for row in (s, y, stretch))
         room = most_rays - self.s.size
-        while True:
+        while room > 0:
             worst = worst_sagitta(y0, y1, a0, a1, s1 - s0, edge)
             at = np.flatnonzero(worst > tolerance)
-            if at.size > room:
-                at = np.sort(at[np.argsort(-worst[at], kind="stable")[:room]])
+            rest = at[:0]
+            if 2 * at.size > room:  # rays run short: half of what is left goes to the worst tubes, round by round
+                at = at[np.argsort(-worst[at], kind="stable")]
+                at, rest = at[: (room + 1) // 2], at[(room + 1) // 2 :]
             if at.size == 0:
                 break
             room -= at.size
             new = 0.5 * (s0[at] + s1[at])
-            found, turned = _traced(self.part, marcher, new)
-            kept.append((new, found, turned))
-            s0, s1 = np.concatenate([s0[at], new]), np.concatenate([new, s1[at]])
-            y0, y1 = np.concatenate([y0[:, at], found], axis=1), np.concatenate([found, y1[:, at]], axis=1)
-            a0, a1 = np.concatenate([a0[:, at], turned], axis=1), np.concatenate([turned, a1[:, at]], axis=1)
+            y, stretch = _traced(self.part, marcher, new)
+            kept.append((new, y, stretch))
+            s0, s1 = np.concatenate([s0[at], new, s0[rest]]), np.concatenate([new, s1[at], s1[rest]])
+            y0, y1 = np.hstack([y0[:, at], y, y0[:, rest]]), np.hstack([y, y1[:, at], y1[:, rest]])
+            a0, a1 = np.hstack([a0[:, at], stretch, a0[:, rest]]), np.hstack([stretch, a1[:, at], a1[:, rest]])
         self._keep(kept)
 
     def _keep(self, batches) -> None:
