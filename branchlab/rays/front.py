@@ -71,7 +71,7 @@ class TracedFront:
             rest = at[:0]
             if 2 * at.size > room:  # rays run short: half of what is left goes to the worst tubes, round by round
                 at = at[np.argsort(-worst[at], kind="stable")]
-                at, rest = at[: (room + 1) // 2], at[(room + 1) // 2 :]
+                at, rest = at[: (room + 1) // 2], at[(room + 1) // 2 : room]
             if at.size == 0:
                 break
             room -= at.size
