@@ -10,6 +10,7 @@ import numpy as np
 import xarray as xr
 
 from branchlab.compare import compare, scintillation, validity_range, verdict
+from branchlab.compare.averaging import check_bands
 from branchlab.compare.smoothing import check_resolution
 from branchlab.conventions import REALISATION, WAVELENGTH, X, wave_parameter, wavenumber
 from branchlab.errors import (
@@ -43,7 +44,12 @@ def _wavelengths(given) -> tuple:
     bands = [isinstance(item, Band) for item in items]
     if any(bands) and not all(bands):
         raise InputError("wavelengths must be numbers or Bands, not both: a number has no average to stand beside.")
-    return items if bands[0] else tuple(check_positive("wavelength", item) for item in items)
+    if bands[0]:
+        return check_bands(items)
+    lengths = tuple(check_positive("wavelength", item) for item in items)
+    if len(set(lengths)) < len(lengths):
+        raise InputError(f"wavelengths must differ; got {', '.join(f'{one:g}' for one in lengths)}.")
+    return lengths
 
 
 def _realisations(given) -> tuple[int, ...]:

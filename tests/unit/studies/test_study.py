@@ -200,6 +200,8 @@ def test_result_goes_through_a_file(tmp_path):
         ({"wavelengths": []}, "wavelengths is empty"),
         ({"wavelengths": [-0.1]}, "wavelength must be positive; got -0.1"),
         ({"wavelengths": [0.1, bl.Band(0.2, 0.1)]}, "numbers or Bands, not both"),
+        ({"wavelengths": [0.1, 0.1]}, "wavelengths must differ; got 0.1, 0.1"),
+        ({"wavelengths": [bl.Band(0.1, 0.1), bl.Band(0.1, 0.2)]}, "two bands have the centre 0.1"),
         ({"resolution": 0.01}, "resolution 0.01 is below one cell"),
         ({"resolution": 3.0}, "above a quarter of the width"),
         ({"threshold": 1.0}, r"threshold must be in \(0, 1\)"),
