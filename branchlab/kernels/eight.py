@@ -49,6 +49,14 @@ class Eight:
         below = self.builder.fcmp_ordered("<", self.value, self._with(0.0))
         return Eight(self.builder, self.builder.select(below, self._with(yes), self._with(no)))
 
+    def crossed(self, before):
+        """Return 1 where these and the numbers `before` lie on two sides of zero, else 0.
+
+        Zero counts as positive: a passage that stops on zero is counted once, there or at the next step.
+        """
+        below = [self.builder.fcmp_ordered("<", one.value, self._with(0.0)) for one in (self, before)]
+        return Eight(self.builder, self.builder.select(self.builder.xor(*below), self._with(1.0), self._with(0.0)))
+
 
 def spread(builder, number) -> Eight:
     """Return eight copies of a double."""

@@ -94,7 +94,7 @@ def _stepping(rows):
             store(a, address(first))
             store(c - turn * a, address(second))
             if first == 3:
-                store(load(builder, address(5)) + (a * before).below_zero(1.0, 0.0), address(5))
+                store(load(builder, address(5)) + a.crossed(before), address(5))
         store(y, address(0))
         store(p - kick * slope, address(1))
         store(action + 0.5 * drift * p * p - kick * value, address(2))
@@ -135,7 +135,7 @@ def _closing(rows):
             store(true_a, there(first))
             store(true_c, there(second))
             if first == 3:
-                maslov = load(builder, here(5)) + (a * before).below_zero(1.0, 0.0)
+                maslov = load(builder, here(5)) + a.crossed(before)
                 store(maslov, here(5))
                 store(_settled(maslov, true_a, true_c), there(5))
         return context.get_dummy_value()

@@ -58,7 +58,7 @@ def caustic_points(states: Iterable[RayState]) -> CausticPoints:
         if before is None:
             passed = np.zeros(state.y.size, dtype=np.int64)
         else:
-            at = np.flatnonzero(before.A * state.A < 0.0)
+            at = np.flatnonzero((before.A < 0.0) != (state.A < 0.0))  # 0 is positive: a zero on a screen counts once
             passed[at] += 1
             ends = [one[at] for pair in zip(before[1:6], state[1:6], strict=True) for one in pair]
             steps = np.full(at.size, before.x), np.full(at.size, state.x - before.x)

@@ -18,7 +18,7 @@ from branchlab.rays.march import Marcher, RayState, refuse_turned
 from branchlab.rays.table import POINTS_PER_SCALE, STEPS_PER_SCALE
 from branchlab.results import dataset, provenance
 
-COARSE = 8.0  # cells of sagitta beyond which a tube is a straight thick line and its flux counts as unresolved
+COARSE = 8.0  # resolutions of sagitta beyond which a tube is a straight thick line and its flux counts as unresolved
 
 
 class RayEnsemble:
@@ -98,9 +98,9 @@ class RayEnsemble:
         curves = np.zeros((3, setup.x.size))
         for part in setup.parts():
             front = TracedFront(part, self.marcher, self.first_rays, 0.5 * wanted, self.most_rays)
-            flux, outside, unresolved = self._laid(front)
+            flux, outside, unresolved = self._laid(front, wanted)
             laid += part.weight * flux
-            rough += part.weight * self._laid(front.halved(coarser))[0]
+            rough += part.weight * self._laid(front.halved(coarser), wanted)[0]
             curves += part.weight * np.array([outside, unresolved, self._crossed(front)])
         sent = laid.sum(axis=1)
         lost, unresolved, crossed = curves
@@ -116,12 +116,12 @@ class RayEnsemble:
         }
         return dataset("density", variables, self._axes(), provenance(setup, model=PARAXIAL))
 
-    def _laid(self, front: TracedFront):
+    def _laid(self, front: TracedFront, resolution: float):
         """Return flux per cell (x, y), and flux outside and unresolved (x), of one front."""
         setup = self.setup
         return lay_tubes(
             front.y, front.A, front.steps, front.tube_flux, front.lap,
-            -0.5 * setup.width, setup.cell, setup.y.size, setup.sides == "periodic", COARSE,
+            -0.5 * setup.width, setup.cell, setup.y.size, setup.sides == "periodic", COARSE * resolution / setup.cell,
         )  # fmt: skip
 
     def _crossed(self, front: TracedFront) -> np.ndarray:

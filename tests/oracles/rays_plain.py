@@ -49,7 +49,7 @@ def kernel_step(ray, w, h):
     for _ in range(2):
         before = a
         y, action, a, b = y + 0.5 * h * p, action + 0.25 * h * p**2, a + 0.5 * h * cc, b + 0.5 * h * d
-        turns += before * a < 0
+        turns += (before < 0) != (a < 0)
         if _ == 0:
             action = action - h * w(y)
             p, cc, d = p - h * w(y, 1), cc - h * w(y, 2) * a, d - h * w(y, 2) * b

@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from branchlab.errors import InputError, RangeError, ResourceError
-from branchlab.launch import AngularSpread, PlaneWave, PointSource
+from branchlab.launch import AngularSpread, Beam, PlaneWave, PointSource
 from branchlab.media import RandomMedium
 from branchlab.rays import RayEnsemble
 from branchlab.results import setup_of
@@ -72,6 +72,7 @@ def test_coarser_resolution_needs_fewer_rays_and_says_what_it_costs():
     smooth = np.ones(8) / 8  # cells of half a correlation length: what was asked for
     means = [d.intensity[-1].to_numpy().reshape(-1, 8) @ smooth for d in (fine, coarse)]
     assert 0.5 * np.abs(means[0] - means[1]).mean() < 0.02
+    assert float(rays.density(resolution=2.0).unresolved_flux.max()) == 0.0  # 32 cells: what was asked for is there
 
 
 def test_unresolved_flux_is_told():
@@ -142,6 +143,15 @@ def test_caustics_agree_with_the_index_of_the_trace():
         mine = caustics.ray_number == ray
         np.testing.assert_array_equal(caustics.order[mine], np.arange(1, counted[ray] + 1))
         assert float(caustics.caustic_x[mine].min()) == first[ray]
+
+
+def test_a_focus_exactly_on_a_screen_is_counted_once():
+    """A = 1 - x/8 is 0.0 to the last bit on the screen x = 8."""
+    rays = rays_of(medium=Empty(), source=Beam(1.0, focus=8.0), length=16.0, sides="absorbing")
+    caustics, trace = rays.caustics(50), rays.trace(50)
+    assert (trace.dyds.sel(x=8.0) == 0.0).all()
+    np.testing.assert_array_equal(caustics.caustic_x, np.full(50, 8.0))
+    np.testing.assert_array_equal(trace.maslov, np.where(trace.x.to_numpy()[:, None] > 8.0, 1, 0) + np.zeros((1, 50)))
 
 
 def test_a_point_source_on_the_entry_is_no_caustic():

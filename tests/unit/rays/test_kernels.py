@@ -84,6 +84,19 @@ def test_march_is_that_of_the_plain_twin(rng, rows, rows_of_state):
     assert true[-1, 5].max() >= 1
 
 
+def test_a_tangent_that_stops_on_zero_has_passed_one_caustic():
+    """Kicks that do nothing: A = 1, 0, -2, -3, back behind one caustic as -1, 0, 2, 3; a start on zero is none."""
+    state = np.zeros((FRONT_ROWS, BLOCK))
+    state[3, :4], state[4, :4] = [1.0, -1.0, 0.0, -0.0], [-8.0, 8.0, 1.0, 1.0]
+    state[5, 1] = 1.0
+    true = np.empty((1, *state.shape))
+    flat = np.zeros((2, N * CELL))
+    march_screens(state, true, flat.ravel(), flat, flat, N, START, N / SPAN, 0.25, 0.0, 2, 0)
+    np.testing.assert_array_equal(state[3, :4], [-3.0, 3.0, 0.5, 0.5])
+    np.testing.assert_array_equal(state[5, :4], [1, 2, 0, 0])
+    np.testing.assert_array_equal(true[0, 5, :4], [1, 2, 0, 0])
+
+
 def test_processor_undoes_itself(rng, rows):
     """Zero steps of no length: from true coordinates to the kernel map's and back, to round-off."""
     kicks, potential, gradient = tables(rows)
