@@ -3,16 +3,18 @@
 x is the range (the way the wave is sent), y is transverse; arrays are ``(x, y)`` with y contiguous.
 The medium is ``v(x, y) = V/E = 1 - n**2``. The time factor is exp(-i omega t): outgoing waves are exp(+ikr).
 Paraxial wave: i du/dx = -(1/2k) d2u/dy2 + (k/2) v u, with psi = u exp(ikx).
+Packets: (i/k) dpsi/dt = -(1/2k**2) lap psi + (v/2) psi; t is a length: the free speed is 1.
+Full rays: H = p**2/2 + v/2, dr/dt = p, dp/dt = -grad v/2.
 Paraxial rays: dy/dx = p, dp/dx = -v_y/2, dS/dx = p**2/2 - v/2; the phase of a ray is kS - (pi/2) maslov.
 """
 
 import math
 
-X, Y, Y_FINE = "x", "y", "y_fine"
+X, Y, X_FINE, Y_FINE, TIME = "x", "y", "x_fine", "y_fine", "time"
 WAVELENGTH, RAY, REALISATION, CAUSTIC, BRANCH = "wavelength", "ray", "realisation", "caustic", "branch"
 
 CARRIER = "exp(ikx) removed"
-PARAXIAL = "paraxial"
+PARAXIAL, FULL = "paraxial", "full"
 SIDES = ("periodic", "absorbing")
 
 MEAN_FIRST_CAUSTIC = 4.1796234
