@@ -1,5 +1,6 @@
-"""Waves: the paraxial wave that marches with the rays' Hamiltonian."""
+"""Waves: the paraxial wave that marches with the rays' Hamiltonian, and packets in time."""
 
+from branchlab.waves.packet import WavePacket, overlap
 from branchlab.waves.paraxial import ParaxialWave
 
-__all__ = ["ParaxialWave"]
+__all__ = ["ParaxialWave", "WavePacket", "overlap"]
