@@ -2,6 +2,7 @@
 
 from branchlab.compare.branches import branches
 from branchlab.compare.comparison import compare
+from branchlab.compare.divergence import divergence
 from branchlab.compare.measures import correlation, displacement, misplaced_flux
 from branchlab.compare.scintillation import scintillation
 from branchlab.compare.smoothing import smooth
@@ -13,6 +14,7 @@ __all__ = [
     "compare",
     "correlation",
     "displacement",
+    "divergence",
     "misplaced_flux",
     "scintillation",
     "smooth",
