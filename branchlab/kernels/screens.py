@@ -120,7 +120,7 @@ def outer_share(spectrum, first, last):
 
 @njit(**_OPTIONS)
 def cell_intensity(out, field, slope, across, bend, strength):
-    """Set `out` to cell means of abs(u)**2 - strength Re(u* (bend u + 2 across du/dy)).
+    """Set `out` to cell means of abs(u - (strength / 2) (bend u + 2 across du/dy))**2.
 
     Parameters
     ----------
@@ -132,12 +132,13 @@ def cell_intensity(out, field, slope, across, bend, strength):
     """
     cells = out.shape[1]
     per = field.shape[1] // cells
+    half = 0.5 * strength
     for j in range(field.shape[0]):
         for cell in range(cells):
             total = 0.0
             for i in range(cell * per, (cell + 1) * per):
                 u, d = field[j, i], slope[j, i]
-                power = u.real * u.real + u.imag * u.imag
-                cross = u.real * d.real + u.imag * d.imag
-                total += power - strength * (bend[i] * power + 2.0 * across[i] * cross)
+                own, turn = 1.0 - half * bend[i], strength * across[i]
+                re, im = own * u.real - turn * d.real, own * u.imag - turn * d.imag
+                total += re * re + im * im
             out[j, cell] = total / per

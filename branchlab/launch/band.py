@@ -5,7 +5,7 @@ import math
 import attrs
 import numpy as np
 
-from branchlab.errors import InputError, check_choice, check_integer, check_positive
+from branchlab.errors import InputError, check_axis, check_choice, check_integer, check_positive
 from branchlab.values import ValueObject, value
 
 SHAPES = ("flat", "gaussian")
@@ -110,3 +110,10 @@ class Band(ValueObject):
     def weights(self) -> np.ndarray:
         """Return the weights of the nodes, shape (n,), in the order of `wavelengths`; they sum to 1."""
         return self._rule()[1]
+
+
+def wavelength_axis(wavelengths) -> np.ndarray:
+    """Return positive wavelengths, shape (wavelength,), from a number, a sequence or a `Band`."""
+    given = wavelengths.wavelengths() if isinstance(wavelengths, Band) else wavelengths
+    axis = check_axis("wavelengths", np.atleast_1d(given))
+    return np.array([check_positive("wavelength", one) for one in axis])

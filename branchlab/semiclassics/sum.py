@@ -10,6 +10,7 @@ import numpy as np
 from branchlab.conventions import CARRIER, PARAXIAL, WAVELENGTH, Y_FINE, X, Y, wavenumber
 from branchlab.errors import InputError, check_choice, check_integer, check_memory, check_number, check_positive
 from branchlab.kernels.packets import threads
+from branchlab.launch.band import wavelength_axis
 from branchlab.launch.part import CoherentPart
 from branchlab.rays import RayEnsemble
 from branchlab.rays.march import RayState
@@ -273,10 +274,3 @@ class SemiclassicalSum:
 def _optional(check, name: str, value):
     """Apply a check to a value that may be None."""
     return None if value is None else check(name, value)
-
-
-def wavelength_axis(wavelengths) -> np.ndarray:
-    """Return positive wavelengths, shape (wavelength,), from a number, a sequence or a Band."""
-    given = wavelengths.wavelengths() if hasattr(wavelengths, "wavelengths") else wavelengths
-    axis = np.atleast_1d(np.asarray(given, dtype=np.float64))
-    return np.array([check_positive("wavelength", one) for one in axis.ravel()])

@@ -13,8 +13,8 @@ from branchlab.errors import (
     check_integer,
     check_memory,
     check_number,
-    check_positive,
 )
+from branchlab.launch.band import wavelength_axis
 from branchlab.results import dataset, provenance
 from branchlab.waves.march import March
 from branchlab.waves.table import ScreenTable
@@ -84,8 +84,8 @@ class ParaxialWave:
         BranchlabWarning
             The spectrum reaches the end of the finest grid that was tried.
         """
-        given = wavelengths.wavelengths() if hasattr(wavelengths, "wavelengths") else wavelengths
-        lengths = np.array([check_positive("wavelength", one) for one in np.atleast_1d(given).ravel()])
+        lengths = wavelength_axis(wavelengths)
+        self._check_samples(lengths)
         parts, setup = self.setup.parts(), self.setup
         if fields and len(parts) > 1:
             raise InputError(
@@ -160,6 +160,16 @@ class ParaxialWave:
                     progress(share[0] + (share[1] - share[0]) * done)
             found["last"][:, number * n : (number + 1) * n] = march.true_field(seen.field, seen.screen)
         return found, psi
+
+    def _check_samples(self, lengths) -> None:
+        """Refuse wavelengths that would see structure which a sampled medium does not hold."""
+        shortest = self.setup.medium.shortest_wavelength
+        if lengths.min() < shortest:
+            raise InputError(
+                f"wavelength {lengths.min():g} in a medium of rough samples needs a spacing <= {lengths.min() / 6:.3g} (6 "
+                f"points per wavelength); the sampled medium has {shortest / 6:.3g}. Use wavelength >= {shortest:.3g}, a "
+                "finer medium, or smooth the samples."
+            )
 
     def _check_memory(self, wavelengths: int, n: int, fields: bool) -> None:
         """Refuse a march whose arrays do not fit."""
