@@ -59,12 +59,15 @@ class CoherentPart:
         ``entry(y, k)`` gives the complex envelope at x = 0, shape (k, y), periodic on the window.
     front : Front
         The rays of the same field.
+    endless : bool
+        True for a plane wave: what open sides cut in the paraxial model goes on beyond them in the full one.
     """
 
     weight: float
     tilt: float
     entry: Callable[[np.ndarray, np.ndarray], np.ndarray]
     front: Front
+    endless: bool = False
 
     def turned(self, by: float, weight: float) -> "CoherentPart":
         """Return the part with transverse momentum `by` added to every ray, and another weight."""

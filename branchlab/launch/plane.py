@@ -75,9 +75,9 @@ class Plane:
         """Return v at any x and the n points of the box across, shape (x, n)."""
         x = np.asarray(x, dtype=np.float64)
         mean = self.setup.medium.mean
-        beyond = np.maximum(-x, x - self.setup.length) / self.fade
+        present = self.present(x)
         v = np.full((x.size, n), mean)
-        near = np.flatnonzero(beyond < 1.0)
+        near = np.flatnonzero(present)
         first, last = self.setup.medium.extent[:2]
         for at in range(0, near.size, ROWS_AT_ONCE):
             some = near[at : at + ROWS_AT_ONCE]
@@ -87,9 +87,12 @@ class Plane:
             for end, outside in ((first, x[some] < first), (last, x[some] > last)):
                 if outside.any():
                     values[outside] = 2.0 * self.window.rows([end], n) - values[outside]
-            share = 1.0 - smooth_step(beyond[some])
-            v[some] += share[:, None] * (values - mean)
+            v[some] += present[some, None] * (values - mean)
         return v
+
+    def present(self, x) -> np.ndarray:
+        """Return how much of the medium is there at x: 1 in the window, 0 beyond the fades."""
+        return 1.0 - smooth_step(np.maximum(-x, x - self.setup.length) / self.fade)
 
     def sample(self, shape) -> np.ndarray:
         """Return v at the points of the box."""

@@ -79,7 +79,7 @@ class PlaneWave(Source):
             return np.broadcast_to(amplitude(y).astype(np.complex128), (np.size(k), y.size)).copy()
 
         front = _plane_front((-half, half), not window.pad, amplitude, path)
-        return (CoherentPart(1.0, tilt, entry, front),)
+        return (CoherentPart(1.0, tilt, entry, front, endless=True),)
 
 
 @value
