@@ -13,7 +13,7 @@ from branchlab.cli.files import check_target, partial
 from branchlab.errors import BranchlabWarning, InputError, check_integer, check_number, check_positive
 from branchlab.launch import Band
 from branchlab.media import SampledMedium
-from branchlab.media.settings import CAUTION
+from branchlab.media.settings import with_caution
 from branchlab.page import draw_study
 from branchlab.results import save
 from branchlab.studies import Study, default_study, own_study, table
@@ -54,9 +54,7 @@ def run(given) -> int:
     print(f"The figure is {figure}")
     if not given.quiet:
         print(f"It took {time.monotonic() - start:.0f} s.\n")
-        for text in (study.note, "" if CAUTION in study.note else CAUTION):
-            if text:
-                print(_wrapped(text))
+        print(_wrapped(with_caution(study.note)))
     if result.attrs["stopped"]:
         return 130
     return 1 if result.attrs["failed"] != "{}" else 0
@@ -87,8 +85,9 @@ def chosen_study(given) -> Study:
     changes = {}
     if given.realisations is not None:
         count = check_integer("--realisations", _number("realisations", given.realisations), low=1)
-        seeds = study.realisations or (study.setup.medium.with_seed(0) and 0,)
-        changes["realisations"] = (*seeds, *range(max(seeds) + 1, max(seeds) + 1 + count))[:count]
+        if count > 1 or study.realisations:  # one is what a medium that is not random has
+            seeds = study.realisations or (study.setup.medium.with_seed(0) and 0,)
+            changes["realisations"] = (*seeds, *range(max(seeds) + 1, max(seeds) + 1 + count))[:count]
     if given.medium is None:
         if given.length is not None:
             changes["setup"] = study.setup.with_(length=_number("length", given.length))

@@ -16,6 +16,12 @@ SAYS = {
     "interference": "is interference between ray families",
     "diffraction": "is diffraction, which no sum over rays contains",
 }
+LESSENS = {
+    "removable": "interference that the band removes",
+    "caustic": "what stays at caustics",
+    "interference": "interference between ray families",
+    "diffraction": "diffraction, which no sum over rays contains,",
+}
 
 
 def _length(value: float, unit: str) -> str:
@@ -67,7 +73,9 @@ def _split(result: xr.Dataset, at: int, beyond: np.ndarray) -> str:
     whole = over("misplaced_flux")
     if not names or not whole > 0:
         return ""
-    parts = [f"{_percent(over(f'misplaced_{name}') / whole)} {SAYS[name]}" for name in names]
+    part = {name: over(f"misplaced_{name}") / whole for name in names}
+    parts = [f"{_percent(part[name])} {SAYS[name]}" for name in names if part[name] >= 0]
+    parts += [f"{LESSENS[name]} lessens it by {_percent(-part[name])}" for name in names if part[name] < 0]
     excess, trusted = over("flux_excess"), over("trusted")
     alarm = f"; the sum carries {_percent(abs(excess))} {'more' if excess >= 0 else 'less'} flux than its rays there"
     if trusted < 0.5:

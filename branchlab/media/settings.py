@@ -17,6 +17,11 @@ CAUTION = (
 )
 
 
+def with_caution(note: str) -> str:
+    """Return a note with the caution behind it, once."""
+    return note if CAUTION in note else f"{note} {CAUTION}".strip()
+
+
 @value
 class Laboratory(ValueObject):
     """What a laboratory medium is to branchlab.
@@ -113,7 +118,7 @@ def light(*, vacuum_wavelength: float, index: float, index_rms: float) -> Labora
         _weak(2.0 * check_positive("index_rms", index_rms) / index, f"index_rms {index_rms:g} and index {index:g}"),
         speed=constants.c / index,
         note="Scalar waves of one polarisation. With lasers: observe eye and skin safety limits as your licensed laser "
-        "safety officer sets them; " + CAUTION,
+        "safety officer sets them. " + CAUTION,
     )
 
 
@@ -134,7 +139,7 @@ def sound(*, frequency: float, speed: float, speed_rms: float) -> Laboratory:
         speed / frequency,
         _weak(2.0 * check_positive("speed_rms", speed_rms) / speed, f"speed_rms {speed_rms:g} and speed {speed:g}"),
         speed=speed,
-        note="Linear sound without loss or shear. Sound levels can harm: " + CAUTION,
+        note="Linear sound without loss or shear. Sound levels can harm. " + CAUTION,
     )
 
 

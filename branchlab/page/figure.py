@@ -10,6 +10,7 @@ from scipy import stats
 
 from branchlab.conventions import REALISATION, WAVELENGTH, X, Y
 from branchlab.errors import InputError
+from branchlab.media.settings import with_caution
 from branchlab.page.palette import INK, INTENSITY, MISMATCH, PAPER, PARTS, QUIET, RULE, WAVES
 from branchlab.results import check
 
@@ -163,7 +164,8 @@ def _headline(figure, result: xr.Dataset) -> None:
         f"At resolution {resolution}, rays place all but {threshold} of the flux rightly out to",
         va="center",
     )
-    figure.text(0.06, 0.018, textwrap.shorten(study["note"], 185), color=QUIET, fontsize=8.5, va="center")
+    note = "\n".join(textwrap.wrap(with_caution(study["note"]), 190))
+    figure.text(0.06, 0.004, note, color=QUIET, fontsize=7.5, va="bottom", linespacing=1.25)
     figure.text(0.06, 0.876, f"{answer}.", va="center", weight="bold")
 
 
@@ -200,17 +202,21 @@ def _maps(figure, places, result: xr.Dataset, at: int) -> None:
             ink = INK if name == "mismatch" else PAPER
             place.axvline(reach, color=ink, lw=1.4, ls=(0, (4, 3)))
             if i == 2:
+                late = reach > x[0] + 0.6 * (x[-1] - x[0])
                 place.annotate(
                     f"range {_length(reach, unit)}",
-                    (reach + 0.015 * (x[-1] - x[0]), 0.96),
+                    (reach + (-0.015 if late else 0.015) * (x[-1] - x[0]), 0.96),
                     xycoords=("data", "axes fraction"),
                     va="top",
+                    ha="right" if late else "left",
                     color=ink,
                     bbox={"boxstyle": "square,pad=0.15", "fc": MISMATCH[3], "ec": "none", "alpha": 0.8},
                 )
         images.append(image)
+    incoming = result.attrs.get("normalisation", "intensity 1") == "intensity 1"
+    scale = "intensity (incoming wave: 1)" if incoming else f"intensity [1/{unit}] (total flux: 1)"
     bars = (
-        (images[1], places[:2], "intensity, rays and wave on one scale", "max"),
+        (images[1], places[:2], f"{scale}, rays and wave on one scale", "max"),
         (images[2], places[2:], "rays brighter  <  0  <  wave brighter", "both"),
     )
     for image, over, text, extend in bars:
@@ -295,23 +301,26 @@ def _end_labels(place, end, ends, top) -> None:
 
 
 def _shares(place, result: xr.Dataset, parts) -> None:
-    """Draw what the misplaced flux on the last screen consists of, one bar a wavelength."""
+    """Draw what the misplaced flux on the last screen consists of, one bar a wavelength; what lessens it, left of 0."""
     unit, end = result.attrs["length_unit"], float(result[X].values[-1])
     order = np.argsort(result[WAVELENGTH].values)
     positions = np.arange(order.size)
-    left = np.zeros(order.size)
+    right, below = np.zeros(order.size), np.zeros(order.size)
     for name in parts:
         size = 100.0 * _over_realisations(result, f"misplaced_{name}")[:, order, -1].mean(axis=0)
+        left = np.where(size >= 0.0, right, below)
         place.barh(
             positions, size, left=left, color=PARTS[name], edgecolor=PAPER, lw=1.0, height=0.66, label=LABELS[name]
         )
         for at, (start, width) in enumerate(zip(left, size, strict=True)):
-            if width > 3.0:
+            if abs(width) > 3.0:
                 ink = PAPER if name == "diffraction" else INK
                 place.text(start + 0.5 * width, at, f"{width:.0f}", ha="center", va="center", color=ink, fontsize=10)
-        left += size
+        right, below = right + np.maximum(size, 0.0), below + np.minimum(size, 0.0)
+    if below.min() < 0.0:
+        place.axvline(0.0, color=INK, lw=1.0)
     place.set_yticks(positions, [_length(one, unit) for one in result[WAVELENGTH].values[order]])
-    place.set(xlabel="part of the flux [%]", xlim=(min(0.0, left.min()), 1.05 * left.max()))
+    place.set(xlabel="part of the flux [%]", xlim=(1.05 * below.min(), 1.05 * right.max()))
     place.set_title(f"Misplaced at x = {_length(end, unit)}, in parts", pad=22)
     place.legend(
         loc="lower left", bbox_to_anchor=(-0.02, 1.0), ncols=len(parts), frameon=False, fontsize=9.5, handlelength=1.0,

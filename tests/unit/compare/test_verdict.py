@@ -69,6 +69,13 @@ def test_doubtful_sum_is_said():
     assert "80 % is interference between ray families and 20 % is diffraction" in text
 
 
+def test_a_part_that_lessens_the_mismatch_is_said_so():
+    result = worked()
+    result["misplaced_diffraction"] = -result["misplaced_diffraction"]
+    text = verdict(result, validity_range(result, threshold=0.1))
+    assert "diffraction, which no sum over rays contains, lessens it by 20 %" in text
+
+
 def test_interval_and_realisations():
     slope = 0.02 + 0.002 * np.random.default_rng(1).normal(size=8)
     result = made.comparison(X, slope[:, None] * X)
