@@ -64,7 +64,7 @@ class Server:
                 probe.bind(("127.0.0.1", 0))
                 port = probe.getsockname()[1]
             self.url = f"http://127.0.0.1:{port}"
-            with open(self.base / "server.log", "ab") as log:
+            with (self.base / "server.log").open("ab") as log:
                 self.process = subprocess.Popen(
                     self._command(port), cwd=self.root, env=self._environment(), stdout=log, stderr=log,
                     start_new_session=True,
