@@ -38,7 +38,7 @@ def divergence(cloud: xr.Dataset, packet: xr.Dataset, *, resolution: float, thre
         that of the packet, the sampling noise of the cloud, sum sqrt(rho/(4 pi resolution**2 rays)) dA/sqrt(2 pi) (independent
         rays; a quasi-random cloud starts with less), and its position error over sqrt(2 pi) resolution; resolved: m is above
         it; divergence_time (wavelength), from which m stays above the threshold to the end, interpolated between times, nan if
-        it does not: `parted` says which; ehrenfest_time, the cloud's logarithmic estimate.
+        it does not: `parted` says which; ehrenfest_time, the cloud's logarithmic estimate (one realisation is off it by up to 5).
 
     Raises
     ------

@@ -185,14 +185,19 @@ def test_rays_fail_later_at_shorter_wavelengths():
 
 
 def test_logarithmic_time():
-    """Packet and cloud part at ln(kappa)/(2 lyapunov) to a factor 2, and later at the shorter wavelength (Berman & Zaslavsky,
-    Physica A 91 (1978) 450; the factor is that of the threshold, 8 % at a third of the packet's spread)."""
-    setup = Setup(RandomMedium(0.2, 1.0, 1), PlaneWave(), 18.0, 14.0)
-    packet, times = Packet(3.0, 0.0, 0.45), np.linspace(0, 8, 17)
-    wave = WavePacket(setup, packet).solve([0.2, 0.4], times=times)
-    cloud = PacketCloud(setup, packet).solve([0.2, 0.4], times=times)
-    result = divergence(cloud, wave, resolution=0.15, threshold=0.08)
-    assert result.parted.all()
-    assert result.divergence_time[0] > result.divergence_time[1] + 0.5
-    share = (result.divergence_time / result.ehrenfest_time).values
-    assert ((share > 0.5) & (share < 2.0)).all()
+    """Over realisations packet and cloud part at ln(kappa)/(2 lyapunov) to a factor 2 in the geometric mean, and later at the
+    shorter wavelength (Berman & Zaslavsky, Physica A 91 (1978) 450, whose law is one of averages; a factor in kappa is
+    that of the threshold, 8 % at a third of the packet's spread). One realisation alone is off by up to 5: its rate of
+    stretch is that of the few bumps which the packet meets."""
+    share, lead = [], []
+    for seed in (21, 22, 23, 24):
+        setup = Setup(RandomMedium(0.2, 1.0, seed), PlaneWave(), 18.0, 14.0)
+        packet, times = Packet(3.0, 0.0, 0.45), np.linspace(0, 10, 21)
+        wave = WavePacket(setup, packet).solve([0.2, 0.4], times=times)
+        cloud = PacketCloud(setup, packet, points=16384).solve([0.2, 0.4], times=times)
+        result = divergence(cloud, wave, resolution=0.15, threshold=0.08)
+        assert result.parted.all()
+        share.append(np.log(result.divergence_time / result.ehrenfest_time))
+        lead.append(result.divergence_time[0] - result.divergence_time[1])
+    assert (np.abs(np.mean(share, axis=0)) < np.log(2.0)).all()
+    assert np.mean(lead) > 0.5
