@@ -152,8 +152,10 @@ def lay_tubes(y, stretch, steps, flux, lap, start, pitch, cells, periodic, coars
     ----------
     y, stretch : ndarray, shape (screen, ray)
         Positions and dy/ds.
-    steps, flux : ndarray, shape (tube,)
-        Step of s and flux of each tube: one tube fewer than rays for an open front, as many for a closed one.
+    steps : ndarray, shape (tube,)
+        Step of s of each tube: one tube fewer than rays for an open front, as many for a closed one.
+    flux : ndarray, shape (1 or screen, tube)
+        What each tube carries, on all screens or on each. A tube that carries nothing may have nan ends.
     lap : float
         For a closed front, the y by which the first ray follows the last.
     start, pitch : float
@@ -170,13 +172,13 @@ def lay_tubes(y, stretch, steps, flux, lap, start, pitch, cells, periodic, coars
     outside, unresolved : ndarray, shape (screen,)
         Flux beyond an open row of cells, and flux of tubes that were laid as straight lines.
     """
-    screens, rays, tubes = y.shape[0], y.shape[1], flux.size
+    screens, rays, tubes = y.shape[0], y.shape[1], steps.size
     laid = np.zeros((screens, cells + 1))
     unresolved = np.zeros(screens)
     inverse = 1.0 / pitch
     for m in prange(screens):
         n = m // 2 if m % 2 == 0 else screens - 1 - m // 2  # later screens are dearer: every thread gets some of both
-        row = laid[n]
+        row, carried = laid[n], flux[min(n, flux.shape[0] - 1)]
         for i in range(tubes):
             j = i + 1
             ahead = 0.0
@@ -189,9 +191,9 @@ def lay_tubes(y, stretch, steps, flux, lap, start, pitch, cells, periodic, coars
             a1 = stretch[n, j] * steps[i] * inverse
             cell = math.floor(y0)
             if cell == math.floor(y1) and 0 <= cell < cells and _monotone(y1 - y0, a0, a1):
-                row[cell] += flux[i]  # most tubes; a call would cost more than this
+                row[cell] += carried[i]  # most tubes; a call would cost more than this
             else:
-                unresolved[n] += lay_tube(row, y0, y1, a0, a1, flux[i], cells, periodic, coarse)
+                unresolved[n] += lay_tube(row, y0, y1, a0, a1, carried[i], cells, periodic, coarse)
     return laid[:, :cells].copy(), laid[:, cells].copy(), unresolved
 
 
@@ -206,7 +208,7 @@ def worst_sagitta(y0, y1, a0, a1, steps, edge):
     steps : ndarray, shape (tube,)
         Step of s between them.
     edge : float
-        A tube that lies wholly beyond y = edge, or below -edge, counts as straight there.
+        A tube that lies wholly beyond y = edge, or below -edge, or has an end that is gone (nan), counts as straight.
 
     Returns
     -------
@@ -221,6 +223,8 @@ def worst_sagitta(y0, y1, a0, a1, steps, edge):
                 low, high = y0[n, i], y1[n, i]
                 chord = high - low
                 sagitta = abs(a0[n, i] * steps[i] - chord) + abs(a1[n, i] * steps[i] - chord)
+                if not np.isfinite(sagitta):
+                    continue
                 reach = edge + sagitta
                 if not (min(low, high) > reach or max(low, high) < -reach):
                     worst[i] = max(worst[i], sagitta)

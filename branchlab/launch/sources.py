@@ -114,7 +114,7 @@ class PointSource(Source):
         edge = float(np.sum(0.5 * w * smooth_step(0.5 * (t + 1.0)) ** 2))
         return 1.0 / np.sqrt(2.0 * self.half_angle * (0.8 + 0.2 * edge))
 
-    def _fan(self, p):
+    def fan(self, p):
         """Return a(p)."""
         return self._height * smooth_step((1.0 - np.abs(p) / self.half_angle) / 0.2)
 
@@ -130,7 +130,7 @@ class PointSource(Source):
         def at(s):
             s = np.asarray(s, dtype=np.float64)
             y = self.y - s * self.x
-            return FrontRays(s, y, s, -0.5 * self.x * s**2, np.full_like(s, -self.x), np.ones_like(s), self._fan(s))
+            return FrontRays(s, y, s, -0.5 * self.x * s**2, np.full_like(s, -self.x), np.ones_like(s), self.fan(s))
 
         span = setup.window.span
 
@@ -139,7 +139,7 @@ class PointSource(Source):
             for row, one in zip(field, np.atleast_1d(k), strict=True):
                 top = int(one * self.half_angle * span / (2.0 * np.pi))
                 q = 2.0 * np.pi * np.arange(-top, top + 1) / span
-                amplitude = self._fan(q / one)
+                amplitude = self.fan(q / one)
                 # the box's modes as nodes of int a**2 dp = 1: weights made exact, so that the flux is 1
                 amplitude /= np.sqrt(span * (amplitude**2).sum())
                 row[:] = np.exp(1j * np.outer(y - self.y, q)) @ (amplitude * np.exp(0.5j * q**2 * self.x / one))

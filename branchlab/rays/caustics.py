@@ -46,11 +46,24 @@ def _root(f0, f1, d0, d1):
     return t
 
 
+def _rates(state: RayState):
+    """Return dy/dx, dp/dx (None for paraxial rays: not used) and dA/dx."""
+    if state.px is None:
+        return state.p, None, state.C
+    # along a front at fixed x, px**2 + p**2 + v = 1
+    return state.p / state.px, state.turn, (state.C - state.p * _forward(state) / state.px) / state.px
+
+
+def _forward(state: RayState):
+    """Return d px/ds of full rays along their front at fixed x."""
+    return state.turn * state.A - state.p * state.C / state.px
+
+
 def caustic_points(states: Iterable[RayState]) -> CausticPoints:
     """Return the zeros of A = dy/ds along rays, from their states at the ends of successive steps.
 
-    Between two states A is the cubic through A and C = dA/dx: exact in free flight, of fourth order in the step
-    elsewhere. Two zeros within one step go unseen.
+    Between two states A is the cubic through A and dA/dx, which is C of paraxial rays: exact in free flight, of fourth
+    order in the step elsewhere. Two zeros within one step go unseen.
     """
     found = []
     passed = before = None
@@ -60,14 +73,17 @@ def caustic_points(states: Iterable[RayState]) -> CausticPoints:
         else:
             at = np.flatnonzero((before.A < 0.0) != (state.A < 0.0))  # 0 is positive: a zero on a screen counts once
             passed[at] += 1
-            ends = [one[at] for pair in zip(before[1:6], state[1:6], strict=True) for one in pair]
-            steps = np.full(at.size, before.x), np.full(at.size, state.x - before.x)
-            found.append((*ends, *steps, at, passed[at]))
+            ends = [row[at] for one in (before, state) for row in (one.y, one.p, one.A)]
+            rates = [np.zeros(at.size) if row is None else row[at] for one in (before, state) for row in _rates(one)]
+            found.append(
+                (*ends, *rates, np.full(at.size, before.x), np.full(at.size, state.x - before.x), at, passed[at])
+            )
         before = state
     columns = [np.concatenate(column) for column in zip(*found, strict=True)]
-    y0, y1, p0, p1, _, _, a0, a1, c0, c1, x, h, ray, order = columns
-    t = _root(a0, a1, h * c0, h * c1)
-    y, slope = _hermite(y0, y1, h * p0, h * p1, t)
-    points = CausticPoints(x + t * h, y, slope / h, ray, order)
+    y0, p0, a0, y1, p1, a1, dy0, dp0, da0, dy1, dp1, da1, x, h, ray, order = columns
+    t = _root(a0, a1, h * da0, h * da1)
+    y, slope = _hermite(y0, y1, h * dy0, h * dy1, t)
+    p = slope / h if before.px is None else _hermite(p0, p1, h * dp0, h * dp1, t)[0]
+    points = CausticPoints(x + t * h, y, p, ray, order)
     in_order = np.argsort(points.x, kind="stable")
     return CausticPoints(*(column[in_order] for column in points))

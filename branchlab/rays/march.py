@@ -23,7 +23,8 @@ class RayState(NamedTuple):
 
     (A, C) is the tangent d(y, p) of the front, or with a full matrix its first column d(y, p)/dy0, and (B, D) the
     second, d(y, p)/dp0. What left the box of absorbing sides, or turned too far, keeps its numbers and has from there
-    on a `status` other than `OK`. y is not wrapped at periodic sides.
+    on a `status` other than `OK`. y is not wrapped at periodic sides. Full rays, whose p is py, have `px` and the rate
+    `turn` = dp/dx too; those of paraxial rays are None.
     """
 
     x: float
@@ -36,10 +37,14 @@ class RayState(NamedTuple):
     status: np.ndarray
     B: np.ndarray | None = None
     D: np.ndarray | None = None
+    px: np.ndarray | None = None
+    turn: np.ndarray | None = None
 
 
 def refuse_turned(state: RayState, flux=None) -> None:
-    """Raise `RangeError` if more than `TURNED_SHARE` of the flux has turned so far that it is not paraxial.
+    """Raise `RangeError` if more than `TURNED_SHARE` of the flux of paraxial rays has turned so far that it is not.
+
+    Full rays may turn: theirs is counted.
 
     Parameters
     ----------
@@ -48,7 +53,7 @@ def refuse_turned(state: RayState, flux=None) -> None:
         Flux that each ray stands for. Default: the same for all.
     """
     turned = state.status == TURNED
-    if not turned.any():
+    if state.px is not None or not turned.any():
         return
     flux = np.ones(turned.size) if flux is None else flux
     share = flux[turned].sum() / flux.sum()

@@ -190,7 +190,7 @@ def test_tubes_against_c(library):
     y, stretch = state.y[None], state.A[None]
 
     def exact():
-        return lay_tubes(y, stretch, flux, flux, WIDTH, -0.5 * WIDTH, pitch, cells, True, 8.0)[0][0]
+        return lay_tubes(y, stretch, flux, flux[None], WIDTH, -0.5 * WIDTH, pitch, cells, True, 8.0)[0][0]
 
     ways = {
         "branchlab, exact tubes": exact,

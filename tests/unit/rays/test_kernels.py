@@ -153,7 +153,7 @@ def wild_tubes(rng, count=60):
 def test_tubes_are_those_of_the_plain_twin(rng, periodic):
     for _ in range(5):
         y, stretch, steps, flux = wild_tubes(rng)
-        laid, outside, unresolved = lay_tubes(y, stretch, steps, flux, 0.0, -2.0, 0.25, 64, periodic, 1e9)
+        laid, outside, unresolved = lay_tubes(y, stretch, steps, flux[None], 0.0, -2.0, 0.25, 64, periodic, 1e9)
         exact, beyond = plain.lay_tubes(y[0], stretch[0], steps, flux, -2.0, 0.25, 64, periodic)
         np.testing.assert_allclose(laid[0], exact, atol=1e-9)
         np.testing.assert_allclose(outside[0], beyond, atol=1e-9)
@@ -164,14 +164,14 @@ def test_tubes_are_those_of_the_plain_twin(rng, periodic):
 def test_coarse_tubes_are_straight_and_counted():
     y, stretch = np.array([[0.1, 3.9]]), np.array([[40.0, -40.0]])
     one = np.ones(1)
-    laid, _, unresolved = lay_tubes(y, stretch, one, one, 0.0, 0.0, 1.0, 4, False, 8.0)
+    laid, _, unresolved = lay_tubes(y, stretch, one, one[None], 0.0, 0.0, 1.0, 4, False, 8.0)
     np.testing.assert_allclose(laid[0] * 3.8, [0.9, 1.0, 1.0, 0.9])
     assert unresolved[0] == 1.0
 
 
 def test_tubes_that_are_not_finite_are_lost_not_hidden():
     y, stretch = np.array([[0.5, np.nan, 1.5, np.inf]]), np.ones((1, 4))
-    laid, outside, unresolved = lay_tubes(y, stretch, np.ones(3), np.ones(3), 0.0, 0.0, 1.0, 4, True, 8.0)
+    laid, outside, unresolved = lay_tubes(y, stretch, np.ones(3), np.ones((1, 3)), 0.0, 0.0, 1.0, 4, True, 8.0)
     assert laid.sum() == 0
     assert outside[0] == unresolved[0] == 3.0
 
@@ -179,7 +179,7 @@ def test_tubes_that_are_not_finite_are_lost_not_hidden():
 def test_tubes_on_edges_of_cells():
     """Rays that sit on edges, and tubes of no width, are laid once."""
     y, stretch = np.array([[0.0, 1.0, 1.0, 0.0, 2.0, 4.0]]), np.array([[1.0, 1.0, 0.0, -1.0, 2.0, 2.0]])
-    laid, outside, _ = lay_tubes(y, stretch, np.ones(5), np.ones(5), 0.0, 0.0, 1.0, 4, False, 8.0)
+    laid, outside, _ = lay_tubes(y, stretch, np.ones(5), np.ones((1, 5)), 0.0, 0.0, 1.0, 4, False, 8.0)
     assert abs(laid.sum() + outside.sum() - 5.0) < 1e-14
     assert laid[0, 0] > 1.0
 
@@ -187,7 +187,7 @@ def test_tubes_on_edges_of_cells():
 def test_a_closed_front_comes_round():
     """Two rays of a closed front: the last tube runs to the first ray, one lap on."""
     y, stretch = np.array([[0.0, 2.0]]), np.ones((1, 2))
-    laid, _, _ = lay_tubes(y, stretch, np.full(2, 2.0), np.full(2, 2.0), 4.0, 0.0, 0.5, 8, True, 8.0)
+    laid, _, _ = lay_tubes(y, stretch, np.full(2, 2.0), np.full((1, 2), 2.0), 4.0, 0.0, 0.5, 8, True, 8.0)
     np.testing.assert_allclose(laid[0], 0.5)
 
 
