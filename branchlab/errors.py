@@ -6,6 +6,7 @@ and what to do.
 
 import difflib
 import math
+import numbers
 import os
 import pathlib
 from collections.abc import Iterable
@@ -87,9 +88,10 @@ def check_positive(name: str, value) -> float:
 def check_integer(name: str, value, *, low: int) -> int:
     """Return `value` as an int of at least `low`, else raise `InputError`."""
     number = check_number(name, value)
-    if number != int(number) or number < low:
+    whole = int(value) if isinstance(value, numbers.Integral) else int(number)  # a float holds whole numbers to 2**53
+    if number != int(number) or whole < low:
         raise InputError(f"{name} must be a whole number of at least {low}; got {value!r}.")
-    return int(number)
+    return whole
 
 
 def check_axis(name: str, values, *, minimum: int = 1) -> np.ndarray:

@@ -7,7 +7,7 @@ import attrs
 import numpy as np
 
 from branchlab.conventions import SIDES
-from branchlab.errors import InputError, RangeError, check_choice, check_integer, check_positive
+from branchlab.errors import InputError, RangeError, check_choice, check_integer, check_memory, check_positive
 from branchlab.launch.part import CoherentPart
 from branchlab.launch.sources import Source
 from branchlab.launch.window import Window
@@ -17,6 +17,7 @@ from branchlab.values import ValueObject, value
 FADE_SCALES = 3.0  # seam and taper in medium scales: degree-9 steps this long are resolved at scale/8
 PAD_SCALES = 6.0  # thinnest absorbing pad in medium scales
 PAD_SHARE = 0.125  # absorbing pad as a share of the width
+GRID_SHARE = 0.6  # of the grid's largest angle the rays' largest may take: intensities are resolved too
 
 
 def _is(cls):
@@ -42,6 +43,15 @@ def smooth_number(n: int) -> int:
     return best
 
 
+def _check_count(n: int, what: str, side: float, scale: float, name: str) -> None:
+    """Refuse an axis that does not fit into memory, with ten numbers to a place: what marchers keep at the least."""
+    check_memory(
+        80.0 * n,
+        f"an axis of {n:.4g} {what} ({side:g} long, in a medium of scale {scale:g})",
+        f"Use fewer {name}, or a smaller window.",
+    )
+
+
 @value
 class Setup(ValueObject):
     """A source sent along x through a window of a medium.
@@ -61,7 +71,7 @@ class Setup(ValueObject):
         Number of screens, equidistant, the first at x = 0 and the last at x = length. Default: no further
         apart than half the medium's scale.
     cells : int, optional
-        Number of transverse cells; every intensity is the mean over one. Default: no wider than scale/16.
+        Number of transverse cells; every intensity is the mean over one. Default: no wider than scale/16, and 64 at least.
     length_unit : str
         Unit that is written to results, for example "mm"; "1" if lengths are plain numbers.
     """
@@ -103,6 +113,7 @@ class Setup(ValueObject):
                 f"{box[0]:g} x {box[1]:g}, after which the medium repeats itself. Use "
                 f"box=({max(self.length, box[0]):g}, {max(self.width, box[1]):g}) in the medium."
             )
+        self._counts  # noqa: B018  (refuses axes that do not fit into memory)
         self.parts()  # refuses a source that does not fit the window
 
     def _widest(self, y0: float, y1: float) -> float:
@@ -119,23 +130,33 @@ class Setup(ValueObject):
             pad = math.ceil(thinnest / self.cell) * self.cell  # whole cells: block means of the box line up
             return Window(self.medium, self.width, pad, min(FADE_SCALES * scale, 0.5 * pad))
         period = self.medium.period_y
-        repeats = period is not None and math.isclose(
-            self.width / period, round(self.width / period), rel_tol=1e-9, abs_tol=0.0
+        repeats = period == 0 or (
+            period is not None
+            and math.isclose(self.width / period, round(self.width / period), rel_tol=1e-9, abs_tol=0.0)
         )
         return Window(self.medium, self.width, 0.0, 0.0 if repeats else min(FADE_SCALES * scale, 0.25 * self.width))
 
     @functools.cached_property
+    def _counts(self) -> tuple[int, int]:
+        """Numbers of screens and cells."""
+        scale = self.medium.scale
+        screens = self.screens or 1 + math.ceil(self.length / min(0.5 * scale, self.length) - 1e-9)
+        _check_count(screens, "screens", self.length, scale, "screens")
+        cells = self.cells or smooth_number(math.ceil(16.0 * self.width / min(scale, 0.25 * self.width) - 1e-9))
+        _check_count(cells, "transverse cells", self.width, scale, "cells")
+        return screens, cells
+
+    @functools.cached_property
     def x(self) -> np.ndarray:
         """Screens, shape (x,): from the entry x = 0 to x = length."""
-        n = self.screens or 1 + math.ceil(self.length / min(0.5 * self.medium.scale, self.length) - 1e-9)
-        screens = np.linspace(0.0, self.length, n)
+        screens = np.linspace(0.0, self.length, self._counts[0])
         screens.setflags(write=False)
         return screens
 
     @functools.cached_property
     def y(self) -> np.ndarray:
         """Centres of the transverse cells, shape (y,)."""
-        n = self.cells or smooth_number(math.ceil(16.0 * self.width / self.medium.scale - 1e-9))
+        n = self._counts[1]
         centres = (np.arange(n) + 0.5) * (self.width / n) - 0.5 * self.width
         centres.setflags(write=False)
         return centres

@@ -2,13 +2,14 @@
 
 import abc
 import math
+import warnings
 
 import attrs
 import numpy as np
 import xarray as xr
 
 from branchlab.conventions import X, Y
-from branchlab.errors import InputError, check_axis
+from branchlab.errors import BranchlabWarning, InputError, check_axis
 from branchlab.media.statistics import measured
 from branchlab.values import ValueObject, value
 
@@ -22,7 +23,7 @@ class Medium(ValueObject, abc.ABC):
     extent = (-math.inf, math.inf, -math.inf, math.inf)
     """(x0, x1, y0, y1): where the medium is defined."""
     period_y = None
-    """Exact transverse period, or None."""
+    """Exact transverse period, or None; 0 if the medium does not depend on y, so that any period will do."""
     repeats_after = (math.inf, math.inf)
     """(x, y): lengths after which a random medium is the same again: no window may be larger."""
     shortest_wavelength = 0.0
@@ -78,8 +79,8 @@ class Medium(ValueObject, abc.ABC):
         Parameters
         ----------
         length, width : float, optional
-            Window 0 <= x <= length, abs(y) <= width/2 in which they are measured. Default: 64 scales by 64 scales, or
-            what the medium has.
+            Window 0 <= x <= length, abs(y) <= width/2 in which they are measured. Default: the super-box
+            of a random medium, else 64 scales by 64 scales or what the medium has.
         """
         return measured(self, length, width)
 
@@ -129,6 +130,19 @@ class SumMedium(Medium):
 
     parts: tuple[Medium, ...] = attrs.field(converter=_flat)
 
+    def __attrs_post_init__(self):
+        seen = set()
+        for part in self.parts:
+            drawn = type(part).__name__, getattr(part, "seed", None)
+            if drawn[1] is not None and drawn in seen:
+                warnings.warn(
+                    f"two parts of the sum are {drawn[0]}s of the same seed, {drawn[1]}: they are drawn from the same numbers "
+                    "and fluctuate together. Give each its own seed.",
+                    BranchlabWarning,
+                    stacklevel=4,
+                )
+            seen.add(drawn)
+
     @property
     def scale(self) -> float:
         """The shortest scale of the parts."""
@@ -147,9 +161,10 @@ class SumMedium(Medium):
 
     @property
     def period_y(self) -> float | None:
-        """The parts' common period, if they have one."""
+        """The parts' common period, if they have one; parts that do not depend on y have any."""
         periods = {part.period_y for part in self.parts}
-        return periods.pop() if len(periods) == 1 else None
+        own = periods - {0.0} or {0.0}
+        return own.pop() if len(own) == 1 else None
 
     @property
     def shortest_wavelength(self) -> float:

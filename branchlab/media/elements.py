@@ -160,6 +160,11 @@ class Ramp(Medium):
         """The length in which v changes by a quarter."""
         return 0.25 / math.hypot(self.slope_x, self.slope_y)
 
+    @property
+    def period_y(self) -> float | None:
+        """0, any period, for a ramp along x alone."""
+        return 0.0 if self.slope_y == 0 else None
+
     def rows(self, x, y, *, dx: int = 0, dy: int = 0) -> np.ndarray:
         """Return v or a derivative of it (see `Medium.rows`)."""
         x, y = check_axis("x", x), check_axis("y", y)

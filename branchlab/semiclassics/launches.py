@@ -3,7 +3,7 @@
 import numpy as np
 
 from branchlab.launch.part import CoherentPart, FrontRays
-from branchlab.rays.march import LEFT, NOT_FINITE, OK, RayState, refuse_turned
+from branchlab.rays.march import LEFT, NOT_FINITE, RayState, refuse_turned
 from branchlab.semiclassics.branches import find_branches
 from branchlab.semiclassics.frozen import FrozenGaussians
 from branchlab.semiclassics.herman_kluk import HermanKluk, PhaseSpace
@@ -24,13 +24,15 @@ def launch_rays(part: CoherentPart, count: int) -> tuple[FrontRays, float]:
 def manifold_on(part: CoherentPart, rays: FrontRays, ds: float, state: RayState) -> Manifold:
     """Return the front of a part as it stands on a screen; rays that are gone become nan.
 
+    A ray that turned farther than a paraxial ray should still carries its flux, and stays.
+
     Raises
     ------
     RangeError
-        A ray turns back.
+        More than a hundredth of the rays turned.
     """
     refuse_turned(state)
-    y = np.where(state.status == OK, state.y, np.nan)
+    y = np.where((state.status == LEFT) | (state.status == NOT_FINITE), np.nan, state.y)
     return Manifold(
         y,
         state.p - part.tilt,

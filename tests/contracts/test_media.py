@@ -7,8 +7,8 @@ import attrs
 import numpy as np
 import pytest
 
-from branchlab.errors import InputError
-from branchlab.media import Lens, Medium, SumMedium
+from branchlab.errors import BranchlabWarning, InputError
+from branchlab.media import Lens, Medium, RandomMedium, SumMedium
 from tests.canon import MEDIA, missing
 
 X = np.array([0.7, 9.3, 4.0, 2.21])  # any coordinates, in any order
@@ -171,6 +171,7 @@ def test_statistics_are_labelled(medium):
 
 
 @every
+@pytest.mark.filterwarnings("ignore:.*of the same seed")  # a medium is added to itself
 def test_media_add(medium):
     lens = Lens(0.1, 1.0, x=2.0)
     both = medium + lens
@@ -181,6 +182,11 @@ def test_media_add(medium):
     assert (medium + lens) + medium == medium + (lens + medium)
     with pytest.raises(TypeError):
         medium + 1.0
+
+
+def test_a_sum_of_one_seed_is_told():
+    with pytest.warns(BranchlabWarning, match="RandomMediums of the same seed, 7: .* fluctuate together"):
+        RandomMedium(0.05, 1.0, 7) + RandomMedium(0.05, 2.0, 7)
 
 
 @every

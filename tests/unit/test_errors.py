@@ -12,6 +12,14 @@ def test_positive_refuses(bad):
         errors.check_positive("width", bad)
 
 
+def test_whole_numbers_keep_every_digit():
+    assert errors.check_integer("seed", 2**60 + 1, low=0) == 2**60 + 1
+    assert errors.check_integer("seed", np.int64(2**60 + 1), low=0) == 2**60 + 1
+    assert errors.check_integer("seed", 3.0, low=0) == 3
+    with pytest.raises(errors.InputError, match="whole number of at least 0; got 2.5"):
+        errors.check_integer("seed", 2.5, low=0)
+
+
 def test_interval_is_printed():
     with pytest.raises(errors.InputError, match=r"angle must be in \(-1, 1\]; got -1"):
         errors.check_number("angle", -1, low=-1, high=1, open_low=True)

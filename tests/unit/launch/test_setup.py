@@ -3,10 +3,10 @@
 import numpy as np
 import pytest
 
-from branchlab.errors import InputError, RangeError
+from branchlab.errors import InputError, RangeError, ResourceError
 from branchlab.launch import Beam, FieldSource, PlaneWave, PointSource, Setup
 from branchlab.launch.setup import smooth_number
-from branchlab.media import RandomMedium
+from branchlab.media import Ramp, RandomMedium
 from branchlab.values import ValueObject
 from tests.canon import SOURCES, setup_with
 
@@ -78,6 +78,26 @@ def test_a_medium_that_repeats_needs_no_seam():
     assert setup.window.fade == 0
     n = 256
     assert np.allclose(setup.window.rows([1.0], n), setup.medium.rows([1.0], setup.window.points(n) + 16.0), atol=1e-12)
+
+
+def test_a_medium_that_does_not_depend_on_y_needs_no_seam():
+    ramp = Ramp(slope_x=0.02)
+    setup = setup_with(medium=ramp)
+    assert setup.window.fade == 0
+    assert np.abs(setup.window.rows([3.0], 64) - 0.06).max() < 1e-15
+    both = setup_with(medium=ramp + RandomMedium(0.1, 1.0, 3, box=(32.0, 16.0)))
+    assert both.window.fade == 0
+    assert setup_with(medium=Ramp(slope_x=0.02, slope_y=0.001)).window.fade > 0
+
+
+def test_a_gentle_medium_has_cells_enough():
+    assert setup_with(medium=Ramp(slope_x=0.001)).y.size >= 64
+
+
+@pytest.mark.parametrize(("name", "what"), [("cells", "transverse cells"), ("screens", "screens")])
+def test_an_axis_that_does_not_fit_is_refused(name, what):
+    with pytest.raises(ResourceError, match=rf"1e\+15 {what} .* GiB are free.*Use fewer {name}"):
+        setup_with(**{name: 10**15})
 
 
 @pytest.mark.parametrize("sides", ["periodic", "absorbing"])

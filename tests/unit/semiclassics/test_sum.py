@@ -8,9 +8,11 @@ from branchlab.launch import AngularSpread, Beam, FieldSource, PlaneWave, PointS
 from branchlab.launch.band import Band
 from branchlab.media import RandomMedium
 from branchlab.rays import RayEnsemble
+from branchlab.rays.march import LEFT, NOT_FINITE, TURNED, RayState
 from branchlab.results import check
 from branchlab.semiclassics import SemiclassicalSum
 from branchlab.semiclassics.curvature import packet_curvature
+from branchlab.semiclassics.launches import launch_rays, manifold_on
 from branchlab.semiclassics.sum import METHODS
 from branchlab.semiclassics.trust import ENTRY_LIMIT, FLUX_EXCESS_LIMIT, UNRESOLVED_LIMIT, trusted
 from tests.oracles.empty import Bowl, Empty
@@ -196,3 +198,16 @@ def test_wrong_input():
     y = np.linspace(-6.0, 6.0, 129)
     with pytest.raises(RangeError, match="must stay below 1"):
         summed(FieldSource(y, 1.0, 2.5 * np.cos(np.pi * y / 6.0)), medium=Empty()).solve(0.2)
+
+
+def test_a_few_rays_that_turned_keep_their_place_and_those_gone_lose_it():
+    (part,) = summed().setup.parts()
+    rays, ds = launch_rays(part, 400)
+    zero = np.zeros(400)
+    status = np.zeros(400, np.int8)
+    status[[3, 5, 7]] = TURNED, LEFT, NOT_FINITE
+    state = RayState(1.0, rays.y, rays.p, zero, zero + 1, zero, zero.astype(int), status)
+    y = manifold_on(part, rays, ds, state).y
+    assert y[3] == rays.y[3]
+    assert np.isnan(y[[5, 7]]).all()
+    assert np.isnan(y).sum() == 2
