@@ -64,6 +64,12 @@ class Plane:
         fades = [self.fade] + ([self.window.fade] if self.window.fade else [])
         return min(self.setup.medium.scale, min(fades) / FADE_SCALES)
 
+    @property
+    def finest_across(self) -> float:
+        """The same for the medium along y alone."""
+        scale = self.setup.medium.scale
+        return min(scale, self.window.fade / FADE_SCALES) if self.window.fade else scale
+
     def points(self, shape) -> tuple[np.ndarray, np.ndarray]:
         """Return x and y of the centres of equal cells, `shape` of them, that fill the box."""
         return tuple(

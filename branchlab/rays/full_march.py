@@ -14,6 +14,7 @@ from branchlab.rays.march import LEFT, OK, SCREENS_BYTES, RayState
 from branchlab.rays.plane_table import PlaneTable
 from branchlab.rays.table import POINTS_PER_SCALE, STEPS_PER_SCALE
 
+FACE_STEPS = 1.5  # how much shorter the steps must be for the slab's face than for a medium of its thickness
 LONGEST_WAY = 64  # times the straight way to the last screen: a ray that needs more is lost
 
 
@@ -28,7 +29,8 @@ class FullMarcher:
     ----------
     setup : Setup
     steps_per_scale, points_per_scale : int
-        Steps in which a ray of the mean medium goes one medium scale, and points of the spline per scale, at least.
+        Of the steps in which a ray of the mean medium goes one medium scale, two thirds; and points of the spline per
+        scale, at least.
     screens : array_like, optional
         Where rays are seen, rising; each must be behind the face's beginning and at most at `length`. Default: `setup.x`.
     """
@@ -59,7 +61,7 @@ class FullMarcher:
     @functools.cached_property
     def table(self) -> PlaneTable:
         """The medium's spline."""
-        step = self.setup.medium.scale / self.steps_per_scale / math.sqrt(self.energy)
+        step = self.plane.face / (FACE_STEPS * self.steps_per_scale * math.sqrt(self.energy))
         return PlaneTable(self.plane, step, self.points_per_scale)
 
     def on(self, screens) -> "FullMarcher":
