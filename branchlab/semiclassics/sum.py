@@ -7,17 +7,19 @@ from typing import NamedTuple
 
 import numpy as np
 
-from branchlab.conventions import CARRIER, PARAXIAL, WAVELENGTH, Y_FINE, X, Y, wavenumber
+from branchlab.conventions import CARRIER, FULL, NO_CARRIER, WAVELENGTH, Y_FINE, X, Y, wavenumber
 from branchlab.errors import InputError, check_choice, check_integer, check_memory, check_number, check_positive
 from branchlab.kernels.packets import threads
 from branchlab.launch.band import wavelength_axis
+from branchlab.launch.fan import background_index
 from branchlab.launch.part import CoherentPart
+from branchlab.launch.setup import GRID_SHARE
 from branchlab.rays import RayEnsemble
-from branchlab.rays.march import RayState
+from branchlab.rays.march import NOT_FINITE, OK, RayState
 from branchlab.results import dataset, provenance
 from branchlab.semiclassics.curvature import packet_curvature
 from branchlab.semiclassics.frozen import FrozenGaussians
-from branchlab.semiclassics.launches import FrontLaunch, PhaseSpaceLaunch, launch_rays, manifold_on
+from branchlab.semiclassics.launches import FrontLaunch, PhaseSpaceLaunch, gone, launch_rays, manifold_on
 from branchlab.semiclassics.manifold import Line
 from branchlab.semiclassics.trust import CAUTIONS, trusted
 
@@ -26,7 +28,7 @@ FEWEST_RAYS, MOST_RAYS = 2048, 1 << 18
 THINNED = 0.005  # share of the flux that may be thinned out before the front gets more rays
 SHARED = 1.5  # wavenumbers that differ by no more than this factor share one phase-space grid
 PILOT_RAYS = 512
-GRID_SHARE = 0.6  # the largest angle of the rays is at this share of the grid's, so that intensities are resolved too
+PILOT_MARGIN = 1.1  # a few of the rays between the pilots go farther than these
 
 
 class _OnScreen(NamedTuple):
@@ -74,6 +76,9 @@ class SemiclassicalSum:
     A sum over rays is not unitary. Every screen's intensity is divided by the sum's flux and multiplied by that
     of its rays; `flux_excess` says by how much they differed, and `trusted` whether that, the flux on unresolved
     rays and the error of the rebuilt entry field are within the limits of `branchlab.semiclassics.trust`.
+
+    On full rays, (px/n)**(1/2) psi is summed in the canonical pair (y, py) on each screen, and "flux" is the integral of
+    the intensity: the density's normalisation.
     """
 
     def __init__(
@@ -109,8 +114,8 @@ class SemiclassicalSum:
         progress : callable, optional
             Called with the fraction done, 0 ... 1; it may raise to cancel.
         fields : bool
-            Also return the envelope psi (exp(ikx) removed, not flux-normalised) on a fine transverse grid; only
-            for a source of one coherent part.
+            Also return the envelope psi (exp(ikx) removed; of full rays psi itself), not flux-normalised, on a fine
+            transverse grid; only for a source of one coherent part.
 
         Returns
         -------
@@ -128,7 +133,7 @@ class SemiclassicalSum:
         """
         wavelengths = wavelength_axis(wavelengths)
         k = wavenumber(wavelengths)
-        setup, parts = self.setup, self.setup.parts()
+        setup, parts = self.setup, self.rays.parts
         if fields and len(parts) > 1:
             raise InputError(
                 f"fields=True needs a source of one coherent part; this one has {len(parts)}, whose intensities "
@@ -174,9 +179,10 @@ class SemiclassicalSum:
         if fields:
             variables["psi"] = ((WAVELENGTH, X, Y_FINE), psi)
             coords[Y_FINE] = ((Y_FINE,), lines[0].points)
-        attrs = {"method": self.method, "caution": CAUTIONS[self.method], "carrier": CARRIER}
+        attrs = {"method": self.method, "caution": CAUTIONS[self.method]}
+        attrs["carrier"] = NO_CARRIER if self._full else CARRIER
         attrs["packet_curvature"] = gamma
-        attrs |= provenance(setup, model=PARAXIAL)
+        attrs |= provenance(setup, model=self.rays.dynamics)
         return dataset("semiclassical", variables, coords, attrs)
 
     def _screens(self, launch, part: CoherentPart, lines, fields: bool):
@@ -204,10 +210,30 @@ class SemiclassicalSum:
             k, field, apart = launch.k[j], screen.field(j, line, alone=True), 0.0
             if launch.packets and state.x == 0.0:
                 given = part.entry(line.points, np.array([k]))[0]
-                apart = np.sum(np.abs(field - given) ** 2) / max(np.sum(np.abs(given) ** 2), 1e-300)
+                rebuilt = launch.on(self._entering(launch.rays)).field(j, line, alone=True) if self._full else field
+                off, given = self._cells(rebuilt - given).sum(), self._cells(given).sum()
+                apart = off / max(given, 1e-300)
             psi = field * np.exp(1j * k * part.tilt * line.points) if fields else None
             found.append(_OnScreen(self._cells(field), sent, screen.unresolved(j, line), apart, psi))
         return found
+
+    def _entering(self, rays) -> RayState:
+        """Return full rays as they would cross x = 0 in the mean medium, where the entry field is given."""
+        one, zero = np.ones_like(rays.y), np.zeros_like(rays.y)
+        square = self._index**2 - rays.p**2
+        status = np.where(square > 0.0, OK, NOT_FINITE)
+        px = np.sqrt(np.where(square > 0.0, square, 1.0))
+        tangents = (rays.dy, rays.dp, zero, status, zero, one)
+        return RayState(0.0, rays.y, rays.p, rays.action, *tangents, px, zero)
+
+    @property
+    def _full(self) -> bool:
+        return self.rays.dynamics == FULL
+
+    @property
+    def _index(self) -> float:
+        """Index of the mean medium."""
+        return background_index(self.setup)
 
     @property
     def _reach(self) -> float:
@@ -216,12 +242,23 @@ class SemiclassicalSum:
 
     def _lines(self, k, gamma: float, *, common: bool) -> list[Line]:
         """Return the transverse grid of each wavenumber."""
-        window, angle = self.setup.window, self.setup.angle_bound() / GRID_SHARE
+        window, angle = self.setup.window, self._steepest() / GRID_SHARE
         # a packet narrower than a third of the pitch would overflow its recurrence and could miss every point
         points = [self.setup.fine_points(one, max(angle, 0.5 * math.sqrt(gamma / one))) for one in k]
         if common:
             points = [max(points)] * len(points)
         return [Line(window.start, window.span / n, n, self.setup.sides == "periodic") for n in points]
+
+    def _steepest(self) -> float:
+        """Return the largest transverse momentum, beyond the tilt, that the grid must carry."""
+        if not self._full:
+            return self.setup.angle_bound()
+        largest = 0.0
+        for part in self.rays.parts:
+            rays, _ = launch_rays(part, PILOT_RAYS)
+            for state in self.rays.marcher.march(rays):
+                largest = max(largest, np.abs(state.p - part.tilt)[~gone(state)].max(initial=0.0))
+        return PILOT_MARGIN * largest
 
     def _cells(self, field) -> np.ndarray:
         """Return the mean intensity over each cell of the setup, shape (y,)."""
@@ -234,7 +271,8 @@ class SemiclassicalSum:
         if self.method != "herman-kluk":
             for part in parts:
                 count = self.front_rays or self._count(part, k.max(), gamma)
-                yield FrontLaunch(part, k, self.method, gamma, self._reach, count), part, range(k.size)
+                launch = FrontLaunch(part, k, self.method, gamma, self._reach, count, self._index)
+                yield launch, part, range(k.size)
             return
         order = np.argsort(k)
         groups, first = [], 0
@@ -245,14 +283,15 @@ class SemiclassicalSum:
         for part in parts:
             spacing = self.spacing or self._spacing(part, gamma)
             for group in groups:
-                yield PhaseSpaceLaunch(part, k[group], box, gamma, self._reach, spacing), part, group
+                index = self._index if self._full else None
+                yield PhaseSpaceLaunch(part, k[group], box, gamma, self._reach, spacing, index), part, group
 
     def _count(self, part: CoherentPart, k: float, gamma: float) -> int:
         """Return how many rays a front needs, from a few sent ahead."""
         rays, ds = launch_rays(part, FEWEST_RAYS)
         needed = FEWEST_RAYS
         for state in self.rays.marcher.march(rays):
-            frozen = FrozenGaussians(manifold_on(part, rays, ds, state), gamma, self._reach)
+            frozen = FrozenGaussians(manifold_on(part, rays, ds, state, self._index), gamma, self._reach)
             flux = max(float(frozen.manifold.flux.sum()), 1e-300)
             # thinning goes with ds**2: four times the wavenumber is twice the step
             while needed < MOST_RAYS and frozen.unresolved(k * (FEWEST_RAYS / needed) ** 2) > THINNED * flux:

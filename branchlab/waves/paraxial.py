@@ -15,6 +15,7 @@ from branchlab.errors import (
     check_number,
 )
 from branchlab.launch.band import wavelength_axis
+from branchlab.launch.setup import GRID_SHARE
 from branchlab.results import dataset, provenance
 from branchlab.waves.march import March
 from branchlab.waves.table import ScreenTable
@@ -22,7 +23,6 @@ from branchlab.waves.table import ScreenTable
 PRECISIONS = {"double": np.complex128, "single": np.complex64}
 TAIL_LIMIT = 1e-5  # share of flux at the end of the spectrum above which the grid is doubled
 DOUBLINGS = 4  # of grid and of steps, at the most
-GRID_SHARE = 0.6  # first grid: the scout's largest angle is at this share of the grid's
 
 
 class ParaxialWave:

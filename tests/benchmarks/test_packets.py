@@ -5,7 +5,6 @@ grids and more rounds.
 """
 
 import os
-import time
 
 import numpy as np
 import pytest
@@ -19,23 +18,13 @@ from branchlab.launch.plane import Plane
 from branchlab.media import RandomMedium
 from branchlab.rays.plane_table import PlaneTable
 from branchlab.waves.plane_march import THREADS, PlaneMarch
+from tests.benchmarks import race
 
 FULL = os.environ.get("BRANCHLAB_BENCHMARK") == "full"
 SHAPES = [(768, 384), (1536, 1024), (3072, 1536)] if FULL else [(384, 192)]
 STEPS = 40 if FULL else 20
 ROUNDS = 12 if FULL else 4
 K = 40.0
-
-
-def best(jobs):
-    """Best time of each job, rounds interleaved."""
-    times = dict.fromkeys(jobs, float("inf"))
-    for _ in range(ROUNDS):
-        for name, job in jobs.items():
-            begin = time.perf_counter()
-            job()
-            times[name] = min(times[name], time.perf_counter() - begin)
-    return times
 
 
 def pair_of(shape):
@@ -70,13 +59,14 @@ def test_step_against_its_transforms(shape):
             psi = scipy.fft.ifft2(kinetic * psi, workers=THREADS)
 
     march.kernel_steps(field, 0.2, 2)
-    times = best(
+    times = race.best(
         {
             "pair": lambda: [pair() for _ in range(STEPS)],
             "march": lambda: march.kernel_steps(field, 0.2, STEPS),
             "processor": lambda: march.processed(field, 0.2, 1.0),
             "plain scipy loop": plain,
-        }
+        },
+        ROUNDS,
     )
     print(f"\npacket on {shape[0]} x {shape[1]} points, {STEPS} steps, pair of {name} transforms on {THREADS} threads")
     for job, seconds in times.items():
@@ -101,7 +91,8 @@ def test_full_rays():
         state[0], state[1], state[2] = rng.uniform(0, 4, rays), rng.uniform(-6, 6, rays), 1.0
         look = table.flat, table.grid, table.box
         march_plane(state.copy(), *look, table.step, 1)
-        seconds = best({"march": lambda state=state, look=look: march_plane(state, *look, table.step, 20)})["march"]
+        ways = {"march": lambda state=state, look=look: march_plane(state, *look, table.step, 20)}
+        seconds = race.best(ways, ROUNDS)["march"]
         speed = rays * 20 / seconds
         print(f"  {tangents} tangents: {speed / 1e6:7.1f} million ray-steps a second")
         assert speed > 1e5

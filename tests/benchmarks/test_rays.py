@@ -5,10 +5,7 @@ Rounds are interleaved and the best of each is taken. `BRANCHLAB_BENCHMARK=full`
 
 import ctypes
 import os
-import shutil
-import subprocess
 import time
-from pathlib import Path
 
 import numba
 import numpy as np
@@ -24,6 +21,7 @@ from branchlab.media import RandomMedium
 from branchlab.rays import RayEnsemble
 from branchlab.rays.march import Marcher
 from tests.benchmarks import race
+from tests.benchmarks.built import library_from
 
 FULL = os.environ.get("BRANCHLAB_BENCHMARK") == "full"
 ROUNDS = 60 if FULL else 12
@@ -36,14 +34,13 @@ WAITING = 2.0  # the same where threads wait for one another
 @pytest.fixture(scope="module")
 def library(tmp_path_factory):
     """The loops in C, built here."""
-    gcc = shutil.which("gcc")
-    if gcc is None:
-        pytest.skip("no gcc on this machine: nothing to compare with")
-    target = tmp_path_factory.mktemp("c") / "ray_step.so"
-    source = Path(__file__).with_name("ray_step.c")
-    options = ["-O3", "-march=native", "-ffast-math", "-fopenmp", "-shared", "-fPIC"]
-    subprocess.run([gcc, *options, "-o", target, source, "-lm"], check=True)
-    return ctypes.CDLL(str(target))
+    return library_from("ray_step.c", tmp_path_factory.mktemp("c"), "-ffast-math")
+
+
+def test_the_library_leaves_small_numbers_alone(library):
+    """Linked with -ffast-math, it would set flush-to-zero for the whole process, and this product would be 0."""
+    smallest = np.array([np.finfo(np.float64).tiny])
+    assert (smallest * 0.5)[0] > 0.0
 
 
 def setup_of(screens=2):

@@ -5,22 +5,22 @@ Rounds are interleaved and the best of each is taken. `BRANCHLAB_BENCHMARK=full`
 
 import ctypes
 import os
-import shutil
-import subprocess
 import time
-from pathlib import Path
 
 import numba
 import numpy as np
 import pytest
 
 from branchlab.launch import PlaneWave, Setup
+from branchlab.launch.setup import GRID_SHARE
 from branchlab.media import RandomMedium
 from branchlab.rays import RayEnsemble
 from branchlab.semiclassics import SemiclassicalSum
 from branchlab.semiclassics.frozen import FrozenGaussians
 from branchlab.semiclassics.launches import launch_rays, manifold_on
 from branchlab.semiclassics.manifold import Line
+from tests.benchmarks import race
+from tests.benchmarks.built import library_from
 
 RAYS, STRENGTH, GAMMA, REACH = 32768, 0.1, 0.416, 5.25
 FULL = os.environ.get("BRANCHLAB_BENCHMARK") == "full"
@@ -31,15 +31,7 @@ ROUNDS = 40 if FULL else 8
 @pytest.fixture(scope="module")
 def library(tmp_path_factory):
     """The two forms in C, built here."""
-    gcc = shutil.which("gcc")
-    if gcc is None:
-        pytest.skip("no gcc on this machine: nothing to compare with")
-    target = tmp_path_factory.mktemp("c") / "sum_packets.so"
-    source = Path(__file__).with_name("sum_packets.c")
-    subprocess.run(
-        [gcc, "-O3", "-march=native", "-fopenmp", "-shared", "-fPIC", "-o", target, source, "-lm"], check=True
-    )
-    return ctypes.CDLL(str(target))
+    return library_from("sum_packets.c", tmp_path_factory.mktemp("c"))
 
 
 def in_c(library, name, manifold, line, k, threads):
@@ -93,17 +85,6 @@ def in_numpy(m, line, k):
     return psi
 
 
-def best(functions, rounds):
-    """Return the shortest time of each function, rounds interleaved."""
-    times = {name: [] for name in functions}
-    for _ in range(rounds):
-        for name, function in functions.items():
-            begin = time.perf_counter()
-            function()
-            times[name].append(time.perf_counter() - begin)
-    return {name: min(values) for name, values in times.items()}
-
-
 @pytest.mark.parametrize(("k", "distance"), CASES)
 def test_frozen_gaussian_screen(library, k, distance):
     medium = RandomMedium(STRENGTH, 1.0, seed=3)
@@ -112,11 +93,11 @@ def test_frozen_gaussian_screen(library, k, distance):
     rays, ds = launch_rays(part, RAYS)
     *_, state = RayEnsemble(setup).marcher.march(rays)
     front = manifold_on(part, rays, ds, state)
-    n = setup.fine_points(k, setup.angle_bound() / 0.6)
+    n = setup.fine_points(k, setup.angle_bound() / GRID_SHARE)
     line = Line(setup.window.start, setup.window.span / n, n, True)
 
     plain = in_numpy(front, line, k)
-    numpy_time = best({"numpy": lambda: in_numpy(front, line, k)}, 1 + FULL)["numpy"]
+    numpy_time = race.best({"numpy": lambda: in_numpy(front, line, k)}, 1 + FULL)["numpy"]
     print(f"\nfrozen Gaussians, one screen, {RAYS} rays, {n} points, k l = {k:g}, {distance:g} first caustics")
     ratios = []
     for threads in (1, numba.get_num_threads()):
@@ -128,7 +109,7 @@ def test_frozen_gaussian_screen(library, k, distance):
             fields[name] = joined()
         for name, field in fields.items():  # the cut exp(-REACH**2/2) = 1e-6 lies elsewhere in each
             assert np.abs(field - plain).max() < 1e-5 * np.abs(plain).max(), name
-        times = best(ways, ROUNDS)
+        times = race.best(ways, ROUNDS)
         c = min(times["C, recurrence"], times["C, eight lanes"])
         times["numpy (1 thread)"] = numpy_time
         print(f"  {threads} thread(s)          ms   of the best C")

@@ -5,7 +5,6 @@ sizes and more rounds.
 """
 
 import os
-import time
 from concurrent.futures import ThreadPoolExecutor
 
 import numpy as np
@@ -17,21 +16,11 @@ from branchlab.launch import PlaneWave, Setup
 from branchlab.media import RandomMedium
 from branchlab.waves.march import THREADS, March
 from branchlab.waves.table import ScreenTable
+from tests.benchmarks import race
 
 FULL = os.environ.get("BRANCHLAB_BENCHMARK") == "full"
 CASES = [(1, 4096), (16, 4096), (64, 2048)] if FULL else [(1, 2048), (16, 2048)]
 STEPS = 300 if FULL else 100
-
-
-def best(jobs, rounds):
-    """Best time of each job, rounds interleaved."""
-    times = dict.fromkeys(jobs, float("inf"))
-    for _ in range(rounds):
-        for name, job in jobs.items():
-            start = time.perf_counter()
-            job()
-            times[name] = min(times[name], time.perf_counter() - start)
-    return times
 
 
 def march_of(wavelengths, n, dtype=np.complex128):
@@ -84,7 +73,7 @@ def test_march_against_its_transforms(wavelengths, n):
         "plain scipy loop": lambda: plain_loop(table, march),
         "medium (once)": medium,
     }
-    times = best(jobs, 7 if FULL else 3)
+    times = race.best(jobs, 7 if FULL else 3)
     print(f"\n{wavelengths} wavelengths, {n} points, {STEPS} steps, {'FFTW' if planned() else 'scipy'} transforms")
     for name, seconds in times.items():
         print(f"  {name:18} {1e3 * seconds:9.1f} ms   {seconds / times['march']:6.2f} x march")
