@@ -38,19 +38,6 @@ def look_up(typingctx, table, index):  # noqa: ARG001  (numba passes its typing 
 
 
 @intrinsic
-def get(typingctx, state, index):  # noqa: ARG001
-    """Return state[index] of an array that `put` may write to."""
-    signature = state.dtype(state, types.intp)
-
-    def generate(context, builder, sig, args):
-        value = builder.load(_address(context, builder, sig.args[0], *args))
-        value.set_metadata("alias.scope", _scope(builder))
-        return value
-
-    return signature, generate
-
-
-@intrinsic
 def put(typingctx, state, index, value):  # noqa: ARG001
     """Set state[index] = value."""
     signature = types.void(state, types.intp, state.dtype)
