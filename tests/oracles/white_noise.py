@@ -22,11 +22,19 @@ class WhiteNoise(Medium):
     step: float = 1.0
     length: float = 1.0
     period: float = 64.0
-    first_scale: float = attrs.field(default=4.0, kw_only=True)
+    grid_scale: float | None = attrs.field(default=None, kw_only=True)  # what grids and steps are fractions of
+
+    @classmethod
+    def of_focal(cls, focal, step, period, seed):
+        """Return the medium with D = 1/focal**3 at the length 1: the caustic scale is `focal`.
+
+        Grids of scale/8 = 1/4 hold it: the spectrum exp(-q**2/4) is down to exp(-39) at their end.
+        """
+        return cls((3.0 * step * focal**3) ** -0.5, seed, step, period=period, grid_scale=2.0)
 
     @property
     def scale(self):
-        return min(self.length, self.first_scale * self.step)
+        return self.grid_scale or min(self.length, 4.0 * self.step)
 
     @property
     def period_y(self):

@@ -12,7 +12,7 @@ from branchlab.rays import RayEnsemble
 from branchlab.rays.front import TracedFront
 from branchlab.rays.march import Marcher
 from tests.canon import SOURCES
-from tests.oracles.rays_media import WhiteNoise
+from tests.oracles.white_noise import WhiteNoise
 
 STRONG = RandomMedium(0.1, 1.0, seed=7)
 
@@ -172,7 +172,9 @@ def test_angles_and_places_in_a_medium_without_memory():
     """
     focal, step, end, seeds, found = 8.0, 0.5, 5, 16, []
     for seed in range(200, 200 + seeds):
-        setup = Setup(WhiteNoise(focal, step, 512.0, seed), PlaneWave(), end * focal, 512.0, screens=3, cells=1024)
+        setup = Setup(
+            WhiteNoise.of_focal(focal, step, 512.0, seed), PlaneWave(), end * focal, 512.0, screens=3, cells=1024
+        )
         rays = launch(np.linspace(-256, 256, 513)[:-1])
         *_, middle, last = Marcher(setup).march(rays)
         rows = [(s.p, s.y - rays.y) for s in (middle, last)]

@@ -11,7 +11,7 @@ from branchlab.launch.part import FrontRays
 from branchlab.rays import RayEnsemble
 from branchlab.rays.caustics import caustic_points
 from branchlab.rays.march import Marcher
-from tests.oracles.rays_media import WhiteNoise
+from tests.oracles.white_noise import WhiteNoise
 
 FOCAL, STEP, WIDTH, SPACING = 8.0, 0.5, 1024.0, 0.5
 END, SEEDS = 16, 30  # in z_c; rays a correlation length apart are as good as independent: about 30 000
@@ -20,7 +20,7 @@ RAYS = int(WIDTH / SPACING)
 
 def setup_of(seed, end):
     """A window of `end` z_c with a screen after every kick."""
-    medium = WhiteNoise(FOCAL, STEP, WIDTH, seed)
+    medium = WhiteNoise.of_focal(FOCAL, STEP, WIDTH, seed)
     return Setup(medium, PlaneWave(), end * FOCAL, WIDTH, screens=1 + round(end * FOCAL / STEP), cells=2048)
 
 
