@@ -200,14 +200,37 @@ class RandomMedium(Medium):
         """Return v, or a derivative of it, on the product grid (see `Medium.rows`); exact mode sums."""
         x, y = check_axis("x", x), check_axis("y", y)
         qx, qy, amplitude = self._table
-        phase = np.outer(qy, y)
-        cosine, sine = np.cos(phase), np.sin(phase)
+        periods = self._whole_periods(y)
+        if periods:
+            turn = 0.5 * np.exp(1j * qy * y[0])
+        else:
+            phase = np.outer(qy, y)
+            cosine, sine = np.cos(phase), np.sin(phase)
         rows = np.empty((x.size, y.size))
         for at in range(0, x.size, ROWS_AT_ONCE):
-            along = np.exp(1j * np.outer(x[at : at + ROWS_AT_ONCE], qx)) * (1j * qx) ** dx
+            block = slice(at, at + ROWS_AT_ONCE)
+            along = np.exp(1j * np.outer(x[block], qx)) * (1j * qx) ** dx
             partial = (along @ amplitude) * (1j * qy) ** dy
-            rows[at : at + ROWS_AT_ONCE] = partial.real @ cosine - partial.imag @ sine
+            if periods:  # mode n turns n * periods times over the grid
+                spectrum = np.zeros((partial.shape[0], y.size // 2 + 1), dtype=np.complex128)
+                spectrum[:, : periods * qy.size : periods] = partial * turn
+                spectrum[:, 0] = partial[:, 0].real  # it is its own mirror image: no half
+                rows[block] = np.fft.irfft(spectrum, n=y.size, axis=1, norm="forward")
+            else:
+                rows[block] = partial.real @ cosine - partial.imag @ sine
         return rows
+
+    def _whole_periods(self, y: np.ndarray) -> int:
+        """Return how many periods an ascending uniform grid fills exactly; 0 if none, or if it does not hold all modes."""
+        if y.size < 2:
+            return 0
+        pitch = (y[-1] - y[0]) / (y.size - 1)
+        periods = round(pitch * y.size / self.period_y)
+        top = periods * (self._table[1].size - 1)
+        if periods < 1 or 2 * top >= y.size:
+            return 0
+        exact = y[0] + np.arange(y.size) * (periods * self.period_y / y.size)
+        return periods if np.abs(y - exact).max() <= 4.0 * np.finfo(float).eps * np.abs(y).max() else 0
 
     def _described(self):
         for name, text in super()._described():

@@ -119,3 +119,26 @@ def test_bumps_against_a_plain_sum(rng):
     for x, y in rng.uniform(-2.0, 6.0, (5, 2)):
         plain = medium.height * (np.exp(-((x - at_x) ** 2 + (y - at_y) ** 2) / 0.49).sum() - 0.8 * math.pi * 0.49)
         assert medium.rows([x], [y])[0, 0] == pytest.approx(plain, abs=1e-14)
+
+
+@pytest.mark.parametrize(("dx", "dy"), [(0, 0), (1, 0), (0, 1), (0, 2)])
+@pytest.mark.parametrize("periods", [1, 3])
+def test_transforms_of_whole_periods_are_the_mode_sum(periods, dx, dy):
+    """On whole periods a row is one Fourier transform; in another order of y it is summed mode by mode."""
+    medium = RandomMedium(0.1, 1.0, 5, box=(12.0, 8.0))
+    x, y = np.linspace(0.0, 5.0, 7), -3.7 + np.arange(360) * (8.0 * periods / 360)
+    assert medium._whole_periods(y) == periods
+    assert medium._whole_periods(y[::-1]) == 0
+    summed = medium.rows(x, y[::-1], dx=dx, dy=dy)[:, ::-1]
+    rms = np.sqrt((summed**2).mean())
+    assert np.abs(medium.rows(x, y, dx=dx, dy=dy) - summed).max() < 1e-13 * rms
+
+
+def test_grids_that_are_not_whole_periods_are_summed():
+    medium = RandomMedium(0.1, 1.0, 5, box=(12.0, 8.0))
+    y = np.arange(360) * (8.0 / 360)
+    assert medium._whole_periods(y) == 1
+    assert medium._whole_periods(y * (1 + 1e-12)) == 0
+    assert medium._whole_periods(y[:-1]) == 0
+    assert medium._whole_periods(y[::18]) == 0  # 20 points do not hold the modes
+    assert medium._whole_periods(y[:1]) == 0
