@@ -13,7 +13,7 @@ import math
 X, Y, X_FINE, Y_FINE, TIME = "x", "y", "x_fine", "y_fine", "time"
 WAVELENGTH, RAY, REALISATION, CAUSTIC, BRANCH = "wavelength", "ray", "realisation", "caustic", "branch"
 
-CARRIER = "exp(ikx) removed"
+CARRIER, NO_CARRIER = "exp(ikx) removed", "none"
 PARAXIAL, FULL = "paraxial", "full"
 SIDES = ("periodic", "absorbing")
 

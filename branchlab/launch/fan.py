@@ -18,7 +18,7 @@ def background_index(setup: Setup) -> float:
 
 
 def full_parts(setup: Setup) -> tuple[CoherentPart, ...]:
-    """Return the coherent parts of a setup's source with the fronts of full rays.
+    """Return the coherent parts of a setup's source with the entry fields and fronts of the full model.
 
     `amplitude**2` of a full front is the true flux per ds: the intensity on x = 0 times p_x/n, n the index of the mean
     medium, so that a plane wave of intensity 1 at an angle sends cos(angle) through a unit of length. A point source
@@ -29,19 +29,19 @@ def full_parts(setup: Setup) -> tuple[CoherentPart, ...]:
     ----------
     setup : Setup
     """
-    index = background_index(setup)
-    return tuple(attrs.evolve(part, front=_full_front(setup, part, index)) for part in setup.parts())
-
-
-def _full_front(setup: Setup, part: CoherentPart, index: float) -> Front:
-    """Return the front of full rays of one part."""
-    origin = setup.source.source if isinstance(setup.source, AngularSpread) else setup.source
+    index, origin = background_index(setup), setup.source
     while isinstance(origin, AngularSpread):
         origin = origin.source
     if isinstance(origin, PointSource):
-        return _fan(origin, part, index)
-    span, inner = part.front.span, part.front.at
-    if part.endless and setup.window.pad:
+        fan = _Fan(setup, origin, index)
+        return tuple(attrs.evolve(part, front=fan.front(part), entry=fan.entry) for part in setup.parts())
+    return tuple(_full_part(setup, part, index) for part in setup.parts())
+
+
+def _full_part(setup: Setup, part: CoherentPart, index: float) -> CoherentPart:
+    """Return a part whose field on x = 0 is that of the paraxial one, not cut if it is endless."""
+    span, inner, uncut = part.front.span, part.front.at, part.endless and setup.window.pad
+    if uncut:
         slope = min(abs(part.tilt) / index, STEEPEST)
         aside = setup.length * slope / math.sqrt(1.0 - slope**2)
         half = 0.5 * setup.window.span
@@ -49,25 +49,54 @@ def _full_front(setup: Setup, part: CoherentPart, index: float) -> Front:
 
     def at(s):
         rays = inner(s)
-        amplitude = np.ones_like(rays.y) if part.endless else rays.amplitude
+        amplitude = np.ones_like(rays.y) if uncut else rays.amplitude
         forward = np.sqrt(np.maximum(index**2 - rays.p**2, 0.0)) / index
         return rays._replace(amplitude=amplitude * np.sqrt(forward))
 
-    return attrs.evolve(part.front, span=span, at=at)
+    def entry(y, k):
+        return np.ones((np.size(k), y.size), dtype=np.complex128) if uncut else part.entry(y, k)
+
+    return attrs.evolve(part, front=attrs.evolve(part.front, span=span, at=at), entry=entry)
 
 
-def _fan(source: PointSource, part: CoherentPart, index: float) -> Front:
-    """Return the front of a point source, even in angle; a tilt turns its momenta after they are spread."""
-    widest = math.asin(min(source.half_angle / index, 1.0))
-    t, w = np.polynomial.legendre.leggauss(400)
-    height = 1.0 / math.sqrt(np.sum(widest * w * source.fan(index * np.sin(widest * t)) ** 2))
+class _Fan:
+    """A point source that is even in angle.
 
-    def at(s):
-        s = np.asarray(s, dtype=np.float64)
-        p, px = index * np.sin(s), index * np.cos(s)
-        ahead = -source.x / np.cos(s)
-        y = source.y + ahead * np.sin(s)
-        amplitude = height * source.fan(p)
-        return FrontRays(s, y, p + part.tilt, index * ahead + part.tilt * y, ahead / np.cos(s), px, amplitude)
+    psi = (k/2pi)**(1/2) int a(p) (n/px)**(1/2) exp(ik[p (y - y0) + px (x - x0)]) dp with a**2 dp = height**2 fan**2
+    dangle, and unit flux. A tilt is added to the momenta on x = 0.
+    """
 
-    return Front((-widest, widest), False, at, phase=part.front.phase)
+    def __init__(self, setup: Setup, source: PointSource, index: float):
+        self.setup, self.source, self.index = setup, source, index
+        self.widest = math.asin(min(source.half_angle / index, 1.0))
+        t, w = np.polynomial.legendre.leggauss(400)
+        power = source.fan(index * np.sin(self.widest * t)) ** 2
+        self.height = 1.0 / math.sqrt(np.sum(self.widest * w * power))
+
+    def front(self, part: CoherentPart) -> Front:
+        """Return the front of a part; s is the angle before the tilt."""
+        source, index, tilt = self.source, self.index, part.tilt
+
+        def at(s):
+            s = np.asarray(s, dtype=np.float64)
+            p, px = index * np.sin(s), index * np.cos(s)
+            ahead = -source.x / np.cos(s)
+            y = source.y + ahead * np.sin(s)
+            forward = np.sqrt(np.maximum(index**2 - (p + tilt) ** 2, 0.0))
+            amplitude = self.height * source.fan(p) * np.sqrt(forward / px)
+            return FrontRays(s, y, p + tilt, index * ahead + tilt * y, ahead / np.cos(s), px, amplitude)
+
+        return Front((-self.widest, self.widest), False, at, phase=part.front.phase)
+
+    def entry(self, y, k):
+        """Return the field on x = 0, shape (k, y), periodic on the window's box, before the tilt."""
+        span = self.setup.window.span
+        field = np.empty((np.size(k), y.size), dtype=np.complex128)
+        for row, one in zip(field, np.atleast_1d(k), strict=True):
+            top = math.ceil(one * self.index * math.sin(self.widest) * span / (2.0 * np.pi)) - 1
+            q = 2.0 * np.pi * np.arange(-top, top + 1) / span
+            px = np.sqrt(self.index**2 - (q / one) ** 2)
+            amplitude = self.height * self.source.fan(q / one) * math.sqrt(self.index) / px
+            amplitude = amplitude * math.sqrt(2.0 * np.pi / one) / span
+            row[:] = np.exp(1j * np.outer(y - self.source.y, q)) @ (amplitude * np.exp(-1j * one * px * self.source.x))
+        return field

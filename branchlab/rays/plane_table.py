@@ -44,7 +44,8 @@ class PlaneTable:
     def __init__(self, plane: Plane, step: float, points_per_scale: int = POINTS_PER_SCALE):
         finest = plane.finest, plane.finest_across
         shape = tuple(
-            smooth_number(math.ceil(points_per_scale * span / fine)) for span, fine in zip(plane.span, finest, strict=True)
+            smooth_number(math.ceil(points_per_scale * span / fine))
+            for span, fine in zip(plane.span, finest, strict=True)
         )
         check_memory(
             8.0 * 6 * PATCH * shape[0] * shape[1],

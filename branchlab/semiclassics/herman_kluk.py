@@ -60,9 +60,21 @@ class PhaseSpace:
         Step of q and p in units of 1/sqrt(k gamma) and sqrt(gamma/k).
     reach : float
         Packets are cut at exp(-reach**2/2), and left out where all overlaps are below that share of the largest.
+    index : float, optional
+        Of the mean medium. Given, packets are those of (px/n)**(1/2) psi, which full rays take along unitarily, and those
+        with abs(p) >= n do not travel.
     """
 
-    def __init__(self, part: CoherentPart, line: Line, k, gamma: float, spacing: float, reach: float):
+    def __init__(
+        self,
+        part: CoherentPart,
+        line: Line,
+        k,
+        gamma: float,
+        spacing: float,
+        reach: float,
+        index: float | None = None,
+    ):
         self.k, self.gamma, self.spacing, self.reach = np.asarray(k, dtype=np.float64), gamma, spacing, reach
         self.periodic = line.periodic
         low, high = self.k.min(), self.k.max()
@@ -87,6 +99,9 @@ class PhaseSpace:
         self.size, self.phase = np.abs(weight), np.angle(weight)
         # the share of the flux that each packet carries, for the flux that is left in the window
         self.share = np.abs(overlap[0, column, row]) ** 2
+        if index is not None:
+            forward = np.sqrt(np.maximum(index**2 - (p + part.tilt) ** 2, 0.0)) / index
+            self.size, self.share = self.size * np.sqrt(forward), self.share * forward
         self.share /= max(self.share.sum(), 1e-300)
         one = np.ones(q.size)
         self.rays = FrontRays(q, q, p + part.tilt, part.tilt * q, one, 0.0 * one, one)
@@ -150,10 +165,13 @@ class HermanKluk:
     matrix : (A, B, C, D)
         Stability matrix on the screen, each of shape (ray,).
     maslov : ndarray, shape (ray,)
+    slow : ndarray, shape (ray,), or 1
+        Of full rays (n/px)**(1/2), which makes psi of (px/n)**(1/2) psi.
     """
 
-    def __init__(self, space: PhaseSpace, sent: float, y, p, action, matrix, maslov):
+    def __init__(self, space: PhaseSpace, sent: float, y, p, action, matrix, maslov, slow=1.0):
         self.space, self.sent, self.y, self.p, self.action = space, sent, y, p, action
+        self.slow, self.there = slow, np.isfinite(y)
         with np.errstate(invalid="ignore"):
             self.root, self.turn = prefactor(*matrix, maslov, space.gamma)
         A, B, C, D = matrix
@@ -163,17 +181,17 @@ class HermanKluk:
     def field(self, which: int, line: Line, *, alone: bool = False) -> np.ndarray:
         """Return the envelope on a line for the wavenumber space.k[which], shape (n,); `alone`: by one thread."""
         space = self.space
-        size, turn = space.size[which] * self.root, space.phase[which] + self.turn
+        size, turn = space.size[which] * self.root * self.slow, space.phase[which] + self.turn
         return (add_packets_alone if alone else add_packets)(
             self.y, self.p, self.action, turn, size, np.zeros_like(size), space.k[which], space.gamma,
             *line[:3], space.reach, line.periodic,
         )  # fmt: skip
 
     def flux(self, half_width: float) -> float:
-        """Return the flux of the packets at abs(y) <= half_width."""
-        share = self.space.share if self.space.periodic else self.space.share[np.abs(self.y) <= half_width]
-        return self.sent * float(share.sum())
+        """Return the flux of the packets at abs(y) <= half_width; of full ones, the integral of their intensity."""
+        inside = self.there if self.space.periodic else np.abs(self.y) <= half_width
+        return self.sent * float((self.space.share * self.slow**2)[inside].sum())
 
     def unresolved(self, which: int, line: Line) -> float:  # noqa: ARG002  (the grid follows the wavelength)
-        """Return the flux of packets whose neighbours have parted by more than `PARTED`."""
-        return self.sent * float(self.space.share[self.parted > PARTED].sum())
+        """Return the same of packets whose neighbours have parted by more than `PARTED`."""
+        return self.sent * float((self.space.share * self.slow**2)[self.there & (self.parted > PARTED)].sum())

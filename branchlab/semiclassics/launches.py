@@ -3,7 +3,7 @@
 import numpy as np
 
 from branchlab.launch.part import CoherentPart, FrontRays
-from branchlab.rays.march import LEFT, NOT_FINITE, RayState, refuse_turned
+from branchlab.rays.march import LEFT, NOT_FINITE, TURNED, RayState, refuse_turned
 from branchlab.semiclassics.branches import find_branches
 from branchlab.semiclassics.frozen import FrozenGaussians
 from branchlab.semiclassics.herman_kluk import HermanKluk, PhaseSpace
@@ -21,18 +21,49 @@ def launch_rays(part: CoherentPart, count: int) -> tuple[FrontRays, float]:
     return part.front.at(low + (np.arange(count) + 0.5) * ds), ds
 
 
-def manifold_on(part: CoherentPart, rays: FrontRays, ds: float, state: RayState) -> Manifold:
+def slowness(state: RayState, index: float) -> np.ndarray | float:
+    """Return by what rays on a screen multiply amplitudes of flux: (n/px)**(1/2) of full rays, 1 of paraxial ones.
+
+    Parameters
+    ----------
+    state : RayState
+    index : float
+        n, the index of the mean medium.
+    """
+    return 1.0 if state.px is None else np.sqrt(index / state.px)
+
+
+def gone(state: RayState) -> np.ndarray:
+    """Return which rays are not on the screen; a paraxial ray that turned farther than it should stays."""
+    away = (state.status == LEFT) | (state.status == NOT_FINITE)
+    return away if state.px is None else away | (state.status == TURNED)
+
+
+def manifold_on(part: CoherentPart, rays: FrontRays, ds: float, state: RayState, index: float = 1.0) -> Manifold:
     """Return the front of a part as it stands on a screen; rays that are gone become nan.
 
-    A ray that turned farther than a paraxial ray should still carries its flux, and stays.
+    A ray that turned farther than a paraxial ray should still carries its flux, and stays; a full ray that turned back is
+    gone.
+
+    Parameters
+    ----------
+    part : CoherentPart
+    rays : FrontRays
+        As launched.
+    ds : float
+        Step of the front parameter.
+    state : RayState
+        The rays on the screen.
+    index : float
+        Index of the mean medium, for full rays.
 
     Raises
     ------
     RangeError
-        More than a hundredth of the rays turned.
+        More than a hundredth of the rays of a paraxial front turned.
     """
     refuse_turned(state)
-    y = np.where((state.status == LEFT) | (state.status == NOT_FINITE), np.nan, state.y)
+    y = np.where(gone(state), np.nan, state.y)
     return Manifold(
         y,
         state.p - part.tilt,
@@ -40,7 +71,7 @@ def manifold_on(part: CoherentPart, rays: FrontRays, ds: float, state: RayState)
         state.A,
         state.C,
         state.maslov,
-        np.ascontiguousarray(rays.amplitude),
+        np.ascontiguousarray(rays.amplitude * slowness(state, index)),
         ds,
         part.front.span[1] - part.front.span[0] if part.front.closed else 0.0,
         part.front.phase,
@@ -60,18 +91,21 @@ class FrontLaunch:
         Of frozen Gaussians.
     count : int
         Number of rays.
+    index : float
+        Index of the mean medium, for full rays.
     """
 
     matrix = False
 
-    def __init__(self, part: CoherentPart, k, method: str, gamma: float, reach: float, count: int):
+    def __init__(self, part: CoherentPart, k, method: str, gamma: float, reach: float, count: int, index: float):
         self.part, self.k, self.method, self.gamma, self.reach = part, k, method, gamma, reach
+        self.index = index
         self.packets = method == "frozen-gaussian"
         self.rays, self.ds = launch_rays(part, count)
 
     def on(self, state: RayState) -> "FrontScreen":
         """Return the sum on the screen of a ray state."""
-        return FrontScreen(self, manifold_on(self.part, self.rays, self.ds, state))
+        return FrontScreen(self, manifold_on(self.part, self.rays, self.ds, state, self.index))
 
 
 class FrontScreen:
@@ -128,21 +162,26 @@ class PhaseSpaceLaunch:
         The box.
     gamma, reach, spacing : float
         See `PhaseSpace`.
+    index : float, optional
+        Index of the mean medium, for full rays; None for paraxial ones.
     """
 
     matrix = packets = True
 
-    def __init__(self, part: CoherentPart, k, line: Line, gamma: float, reach: float, spacing: float):
-        self.part, self.k = part, k
-        self.space = PhaseSpace(part, line, k, gamma, spacing, reach)
+    def __init__(
+        self, part: CoherentPart, k, line: Line, gamma: float, reach: float, spacing: float, index: float | None
+    ):
+        self.part, self.k, self.index = part, k, index
+        self.space = PhaseSpace(part, line, k, gamma, spacing, reach, index)
         self.rays = self.space.rays
         rays, ds = launch_rays(part, 4096)
-        self.sent = float(np.sum(rays.amplitude**2) * ds)
+        inside = np.abs(rays.y) <= -line.start  # an endless front begins beyond open sides, its packets do not
+        self.sent = float(np.sum(rays.amplitude[inside] ** 2) * ds)
 
     def on(self, state: RayState) -> HermanKluk:
         """Return the sum on the screen of a ray state."""
         # packets beyond |p| = 1 belong to the paraxial wave too, and carry next to nothing: they stay
-        gone = (state.status == LEFT) | (state.status == NOT_FINITE)
-        y = np.where(gone, np.nan, state.y)
+        y = np.where(gone(state), np.nan, state.y)
         p, action = state.p - self.part.tilt, state.action - self.part.tilt * y
-        return HermanKluk(self.space, self.sent, y, p, action, (state.A, state.B, state.C, state.D), state.maslov)
+        matrix = (state.A, state.B, state.C, state.D)
+        return HermanKluk(self.space, self.sent, y, p, action, matrix, state.maslov, slowness(state, self.index))
