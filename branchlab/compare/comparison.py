@@ -104,7 +104,7 @@ def compare(rays, wave, semiclassical=None, *, resolution: float, band=None) -> 
         - with a sum and a band: maps `removable`, `caustic_part`, `diffraction` that add up to `mismatch`; with a
           sum alone `interference` and `diffraction`. Each also as `share_...` (half its absolute integral) and as
           `misplaced_...` (the portion of the misplaced flux that it accounts for; these add up to it), with the
-          sum's `flux_excess` and `trusted`.
+          sum's `flux_excess` and `trusted`, and its method as attribute `sum_method`.
 
         Attribute `pair` is "matched", or "mixed" if rays and wave do not share one Hamiltonian: a mixed pair
         measures the paraxial approximation, and `validity_range` refuses it.
@@ -161,7 +161,10 @@ def compare(rays, wave, semiclassical=None, *, resolution: float, band=None) -> 
         found["flux_excess"] = (CURVE, sums.curve("flux_excess"))
         found["trusted"] = (CURVE, sums.curve("trusted") > 0.5)
 
-    return _assembled(found, rays, wavelengths, resolution, bands, matched, wave.attrs["model"])
+    attrs = {"wave_model": wave.attrs["model"]}
+    if semiclassical is not None:
+        attrs["sum_method"] = semiclassical.attrs["method"]
+    return _assembled(found, rays, wavelengths, resolution, bands, matched, attrs)
 
 
 def _measures(ray, wave, cell, sides, error, ending) -> dict:
@@ -177,7 +180,7 @@ def _measures(ray, wave, cell, sides, error, ending) -> dict:
     }
 
 
-def _assembled(found, rays, wavelengths, resolution, bands, matched, wave_model) -> xr.Dataset:
+def _assembled(found, rays, wavelengths, resolution, bands, matched, more) -> xr.Dataset:
     """Build the Dataset, with the realisation dimension only if the inputs have one."""
     several = REALISATION in rays["intensity"].dims
     if not several:
@@ -187,7 +190,7 @@ def _assembled(found, rays, wavelengths, resolution, bands, matched, wave_model)
     if several and REALISATION in rays.coords:
         coords[REALISATION] = ((REALISATION,), rays[REALISATION].values)
     attrs = {name: rays.attrs[name] for name in ("model", "sides", "length_unit", "setup", "versions")}
-    attrs |= {"resolution": resolution, "pair": "matched" if matched else "mixed", "wave_model": wave_model}
+    attrs |= {"resolution": resolution, "pair": "matched" if matched else "mixed", **more}
     if bands:
         attrs["bands"] = json.dumps([one.to_dict() for one in bands])
     return dataset("comparison", found, coords, attrs)

@@ -23,6 +23,13 @@ LESSENS = {
     "diffraction": "diffraction, which no sum over rays contains,",
 }
 
+SUMS = {
+    "frozen-gaussian": "frozen Gaussians on the launching front",
+    "herman-kluk": "Herman-Kluk, over phase space: it already holds part of the diffraction",
+    "uniform": "branch by branch, with Airy functions at folds",
+    "primitive": "branch by branch, infinite at caustics",
+}
+
 
 def _length(value: float, unit: str) -> str:
     """Return a length with three significant digits and its unit."""
@@ -137,6 +144,8 @@ def verdict(result: xr.Dataset, validity: xr.Dataset) -> str:
         if split:
             where = "Of the flux misplaced beyond it" if not beyond.all() else "Of the flux misplaced in the window"
             lines.append(f"  {where}, {split}")
+    if method := result.attrs.get("sum_method"):
+        lines.append(f"The sum over rays: {SUMS.get(method, method)}.")
     endings = ("", "_band") if bands else ("",)
     error = max(float(np.nanmax(result["numerical_error" + ending].values)) for ending in endings)
     entered = x > x[0]

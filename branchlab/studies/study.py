@@ -27,6 +27,7 @@ from branchlab.media import SampledMedium
 from branchlab.rays import RayEnsemble
 from branchlab.results import labelled
 from branchlab.semiclassics import SemiclassicalSum
+from branchlab.semiclassics.trust import ENTRY_LIMIT
 from branchlab.values import ValueObject, value
 from branchlab.waves import ParaxialWave
 
@@ -153,6 +154,8 @@ class Study(ValueObject):
     def compared(self, seed: int | None = None, progress=None) -> xr.Dataset:
         """Return the comparison of rays, wave and sum in one realisation.
 
+        The sum is of frozen Gaussians, or for a source that they cannot rebuild (a narrow beam, a point) Herman-Kluk's.
+
         Parameters
         ----------
         seed : int, optional
@@ -176,6 +179,8 @@ class Study(ValueObject):
         total, told = None, stage("sum")
         if "attribution" in self.measures:
             total = SemiclassicalSum(ensemble).solve(solved, told)
+            if float(total["entry_error"].max()) > ENTRY_LIMIT:  # a source no larger than a few packets
+                total = SemiclassicalSum(ensemble, "herman-kluk").solve(solved, told)
         result = compare(
             rays,
             wave if self.bands else wave.sel(wavelength=list(self.wavelengths)),

@@ -51,7 +51,7 @@ def total(of, wavelengths, intensity, *, excess=0.0, trusted=True, model="paraxi
         "trusted": ((WAVELENGTH, X), np.broadcast_to(trusted, shape[:2]).copy()),
     }
     coords = {**_coords(of), WAVELENGTH: ((WAVELENGTH,), wavelengths)}
-    return dataset("semiclassical", variables, coords, provenance(of, model=model))
+    return dataset("semiclassical", variables, coords, provenance(of, model=model) | {"method": "frozen-gaussian"})
 
 
 def comparison(x, misplaced, *, error=0.0, band=None, of=None):
