@@ -4,13 +4,15 @@ import functools
 import math
 
 import numpy as np
+import scipy.fft
 
 from branchlab.errors import RangeError, check_memory
 from branchlab.kernels.fourier import resampled, wavenumbers
+from branchlab.launch.plane import Plane
 from branchlab.launch.setup import smooth_number
 from branchlab.launch.slab import Slab
 
-MEDIUM_POINTS = 32  # per medium scale: they carry its spectrum and that of face and fades
+MEDIUM_POINTS = 16  # per length that must be resolved: they carry the spectrum of medium, fades and face to 1e-8
 PAD_WAVELENGTHS = 14.0  # thickness of an absorbing pad: see `FullGrid`
 PAD_LOSS = 10.0  # peak loss in wavelengths over pad thickness
 MEDIUM_WAVENUMBER = 8.0  # in 1/scale, that the medium adds to the wave's own
@@ -46,9 +48,9 @@ class SlabTable:
             )
         self.index = math.sqrt(1.0 - mean)
         self.start = -0.5 * self.slab.face
-        finest = self.slab.finest
-        self.step = setup.length / math.ceil(MEDIUM_POINTS * setup.length / finest)
-        self.per_cell = max(1, math.ceil(MEDIUM_POINTS * setup.cell / finest))
+        along, across = self.slab.finest, Plane.finest.fget(self.slab)  # the face is only met along x
+        self.step = setup.length / math.ceil(MEDIUM_POINTS * setup.length / along)
+        self.per_cell = max(1, math.ceil(MEDIUM_POINTS * setup.cell / across))
 
     @functools.cached_property
     def _sampled(self) -> tuple[int, np.ndarray]:
@@ -68,6 +70,11 @@ class SlabTable:
         v /= 1.0 - mean
         return first, v
 
+    def bytes_on(self, grid) -> float:
+        """Return the bytes that samples and their refitting take on a grid."""
+        first, u = self._sampled
+        return u.nbytes + 24.0 * (grid.steps[1] - grid.steps[0]) * max(grid.shape[1], grid.cells * self.per_cell)
+
     @property
     def lowest(self) -> float:
         """Smallest u."""
@@ -83,28 +90,46 @@ class SlabTable:
         """Root mean square of u in the window."""
         return float(np.sqrt(np.mean(self._sampled[1] ** 2)))
 
+    def _embedded(self, grid) -> np.ndarray:
+        """Return u on the samples' own points all over a grid's box, 0 beyond the slab."""
+        first, u = self._sampled
+        whole = np.zeros((grid.steps[1] - grid.steps[0], grid.cells * self.per_cell))
+        spare = (whole.shape[1] - u.shape[1]) // 2
+        source = slice(max(0, -spare), u.shape[1] - max(0, -spare))
+        target = slice(max(0, spare), whole.shape[1] - max(0, spare))
+        begin = first - grid.steps[0]
+        whole[begin : begin + u.shape[0], target] = u[:, source]
+        return whole
+
     def on(self, grid, dtype) -> np.ndarray:
         """Return u on a grid, shape (nx, ny), band-limited where the grid is coarser than the samples."""
-        first, u = self._sampled
-        rows, columns = grid.steps[1] - grid.steps[0], grid.cells * self.per_cell
-        wide = np.zeros((rows, columns))
-        spare = (columns - u.shape[1]) // 2
-        source = slice(max(0, -spare), u.shape[1] - max(0, -spare))
-        target = slice(max(0, spare), columns - max(0, spare))
-        begin = first - grid.steps[0]
-        wide[begin : begin + u.shape[0], target] = u[:, source]
         nx, ny = grid.shape
-        across = _refit(wide, ny)
+        across = resampled(self._embedded(grid), ny)
         out = np.empty((nx, ny), dtype)
         for at in range(0, ny, COLUMNS_AT_ONCE):
             some = np.ascontiguousarray(across[:, at : at + COLUMNS_AT_ONCE].T)
-            out[:, at : at + COLUMNS_AT_ONCE] = _refit(some, nx).T
+            out[:, at : at + COLUMNS_AT_ONCE] = resampled(some, nx).T
         return out
 
+    def lines(self, grid, numbers, axis: int) -> np.ndarray:
+        """Return u on lines of a grid, on twice the grid's points along them, shape (line, 2 n).
 
-def _refit(rows, n: int) -> np.ndarray:
-    """Return periodic rows on n points (see `resampled`); fewer points keep what of the spectrum they can hold."""
-    return resampled(rows, n)
+        Parameters
+        ----------
+        grid : FullGrid
+        numbers : ndarray of int
+            Rows (axis 0) or columns (axis 1) of the grid.
+        axis : {0, 1}
+        """
+        whole = self._embedded(grid) if axis == 0 else self._embedded(grid).T
+        n, m = grid.shape[axis], whole.shape[0]
+        order = np.fft.fftfreq(m, 1.0 / m)
+        # the Fourier series of m samples at a grid point: both are centres of equal cells of one box
+        turn = np.exp(2j * np.pi * np.multiply.outer((numbers + 0.5) / n - 0.5 / m, order)) / m
+        if m % 2 == 0:
+            turn[:, m // 2] = 0.0
+        weights = scipy.fft.fft(turn, axis=1).real
+        return resampled(weights @ whole, 2 * grid.shape[1 - axis])
 
 
 class FullGrid:

@@ -1,5 +1,7 @@
 """In-medium sweeps: an approximate inverse of the damped operator, by waves that march one way."""
 
+import math
+
 import numpy as np
 import scipy.fft
 
@@ -23,6 +25,7 @@ GRAZING_LOSS = 0.2  # amplitude lost per k h there, at the most
 SOFT_POLE = 1e-3  # imaginary part of p**2/k**2 that keeps h/(2 i p) finite at grazing
 SELF_SHARE = 0.85  # share of the lattice sum's own point that the sweeps leave out
 CLIP = 0.6  # v beyond this is not followed by the amplitude factor and the correction
+MOST_TURNS = 12
 TURNOVER = 0.456, 0.544  # smoothstep from x- to y-sweeps in abs(qy)/(abs(qx) + abs(qy)): 40 to 50 degrees
 
 
@@ -72,8 +75,8 @@ class _Lines:
         out, q : ndarrays, shape (rows, n)
         prepare : callable
             prepare(thread, begin, end) makes these rows of q and of `out` as they are without waves.
-        turns : {1, 2}
-            2 goes round a periodic box once before anything is kept.
+        turns : int
+            How often to go round a periodic box; only the last turn is kept.
         """
         for pair in self.pairs:
             pair[...] = 0.0
@@ -183,6 +186,8 @@ class Sweeps:
         self.weights = tuple((one.weight / count).astype(operator.dtype) for one in (self.along, self.across))
         self.q_spectrum = operator.empty()
         self.q_turned, self.out_turned = (np.empty(turned.shape, operator.dtype) for _ in range(2))
+        # waves along y go round periodic sides about this often before they have left along x
+        self.turns = 1 if grid.pad_y else min(MOST_TURNS, 2 + math.ceil(2.0 * grid.span[0] / grid.span[1]))
         self.wide = True
 
     def apply(self, out, residual) -> None:
@@ -242,7 +247,7 @@ class Sweeps:
             self.out_turned[begin:end] = self.q_turned[begin:end]
 
         self.along.run(out, self.q, prepare)
-        self.across.run(self.out_turned, self.q_turned, prepare_turned, turns=1 if op.grid.pad_y else 2)
+        self.across.run(self.out_turned, self.q_turned, prepare_turned, turns=self.turns)
         team.run(lambda t: add_turned(out, self.out_turned, *op.rows[t]))
 
     def _plain_split(self, residual) -> None:
