@@ -17,6 +17,11 @@ CARRIER, NO_CARRIER = "exp(ikx) removed", "none"
 PARAXIAL, FULL = "paraxial", "full"
 SIDES = ("periodic", "absorbing")
 
+CAUTION = (
+    "Linear theory, research use; not for navigation, warning, structural design or safety limits. Follow local codes and "
+    "licensed practice."
+)
+
 MEAN_FIRST_CAUSTIC = 4.1796234
 """Mean distance to the first caustic of a plane wave in units of z_c = D**(-1/3), white-noise limit:
 (2/3) 2**(1/3) pi**2 [Ai(0)**2 + Bi(0)**2] (law: Kulkarny & White, Phys. Fluids 25 (1982) 1770)."""
@@ -40,3 +45,8 @@ def wave_parameter(wavenumber, angle_diffusion, curvature_noise):
         D = A''''(0), 1/length**3.
     """
     return 3.0 * wavenumber * angle_diffusion * curvature_noise ** (-2.0 / 3.0)
+
+
+def with_caution(note: str) -> str:
+    """Return a note with the caution behind it, once."""
+    return note if CAUTION in note else f"{note} {CAUTION}".strip()

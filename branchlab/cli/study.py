@@ -10,10 +10,10 @@ import warnings
 from tqdm import tqdm
 
 from branchlab.cli.files import check_target, partial
+from branchlab.conventions import with_caution
 from branchlab.errors import BranchlabWarning, InputError, check_integer, check_number, check_positive
 from branchlab.launch import Band
 from branchlab.media import SampledMedium
-from branchlab.media.settings import with_caution
 from branchlab.page import draw_study
 from branchlab.results import save
 from branchlab.studies import Study, default_study, own_study, table

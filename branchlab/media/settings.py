@@ -8,18 +8,9 @@ import math
 import attrs
 from scipy import constants
 
+from branchlab.conventions import CAUTION
 from branchlab.errors import InputError, check_number, check_positive
 from branchlab.values import ValueObject, value
-
-CAUTION = (
-    "Linear theory, research use; not for navigation, warning, structural design or safety limits. Follow local codes and "
-    "licensed practice."
-)
-
-
-def with_caution(note: str) -> str:
-    """Return a note with the caution behind it, once."""
-    return note if CAUTION in note else f"{note} {CAUTION}".strip()
 
 
 @value

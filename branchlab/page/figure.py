@@ -8,9 +8,8 @@ import numpy as np
 import xarray as xr
 from scipy import stats
 
-from branchlab.conventions import REALISATION, WAVELENGTH, X, Y
+from branchlab.conventions import REALISATION, WAVELENGTH, X, Y, with_caution
 from branchlab.errors import InputError
-from branchlab.media.settings import with_caution
 from branchlab.page.palette import INK, INTENSITY, MISMATCH, PAPER, PARTS, QUIET, RULE, WAVES
 from branchlab.results import check
 
