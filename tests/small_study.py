@@ -19,6 +19,7 @@ def small_study(**changes):
         resolution=0.15,
         realisations=[1, 2, 3],
         measures=("attribution", "scintillation"),
+        model="paraxial",
         title="A small block",
         note="Invented data.",
     )

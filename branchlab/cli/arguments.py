@@ -85,6 +85,11 @@ def _add_study(study: Parser) -> None:
     what.add_argument("--resolution", metavar="D", help="standard deviation of the smoothing of rays and wave")
     what.add_argument("--threshold", metavar="T", help="part of the flux that may be misplaced (default: 0.15)")
     what.add_argument("--length", metavar="X", help="how far the wave is followed")
+    what.add_argument(
+        "--model",
+        metavar="MODEL",
+        help="full: full rays and the full wave; paraxial: for small angles, faster (default: what the study says, or full)",
+    )
     what.add_argument("--realisations", metavar="N", help="number of realisations of a random medium")
     out = study.add_argument_group("output")
     out.add_argument(

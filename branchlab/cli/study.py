@@ -82,7 +82,7 @@ def chosen_study(given) -> Study:
         study = _read(pathlib.Path(given.study_file)) if given.study_file else default_study()
     else:
         study = _own(given)
-    changes = {}
+    changes = {} if given.model is None else {"model": given.model}
     if given.realisations is not None:
         count = check_integer("--realisations", _number("realisations", given.realisations), low=1)
         if count > 1 or study.realisations:  # one is what a medium that is not random has
@@ -208,6 +208,7 @@ def _opening(study: Study) -> str:
     lines = [
         study.title,
         f"{type(setup.source).__name__} through {type(setup.medium).__name__}: {window}, {setup.y.size} cells",
+        f"{study.model} rays and the {study.model} wave",
         f"wavelengths {waves}; {seeds or 1} realisation{'s' if seeds > 1 else ''} of the medium",
         "(the first run after installation also compiles its loops)",
     ]

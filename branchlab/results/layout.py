@@ -74,6 +74,8 @@ NAMES = {
     "intensity_wave": ("I", "wave intensity, smoothed to the resolution"),
     "mismatch": ("I", "wave intensity minus ray density"),
     "misplaced_flux": ("1", "misplaced flux"),
+    "misplaced_flux_rays": ("1", "misplaced flux between the rays of the two models"),
+    "numerical_error_rays": ("1", "numerical error of the rays of both models, as misplaced flux"),
     "misplaced_flux_band": ("1", "misplaced flux of the band average"),
     "displacement": ("L", "displacement (Wasserstein-1 distance)"),
     "displacement_band": ("L", "displacement of the band average"),
@@ -86,6 +88,8 @@ NAMES = {
     "scintillation": ("1", "scintillation index"),
     "scintillation_ray": ("1", "scintillation index of the rays, at the resolution"),
     "scintillation_wave": ("1", "scintillation index of the wave, at the resolution"),
+    "paraxial_error": ("1", "misplaced flux between the paraxial and the full wave, at the resolution"),
+    "paraxial_error_rays": ("1", "misplaced flux between paraxial and full rays, at the resolution"),
     "wave_parameter": ("1", "kappa = 3 k Dtheta D**(-2/3): rays fail by it and by x/z_c alone"),
     "mean_first_caustic": ("L", "mean first caustic of a plane wave, weak-fluctuation limit"),
     "scintillation_band": ("1", "scintillation index of the band average, at the resolution"),
@@ -181,6 +185,11 @@ KINDS = {
             name: (WAVELENGTH, X)
             for name in ("misplaced_flux", "displacement", "correlation", "numerical_error", "resolved")
         },
+    },
+    "paraxial error": {
+        **{name: (WAVELENGTH, X) for name in ("misplaced_flux", "numerical_error", "resolved")},
+        **{name: (X,) for name in ("misplaced_flux_rays", "numerical_error_rays")},
+        **{name: (WAVELENGTH,) for name in ("reach", "crossed")},
     },
     "validity": {name: (WAVELENGTH,) for name in ("reach", "reach_low", "reach_high", "crossed", "decided")},
     "branches": {

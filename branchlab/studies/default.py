@@ -25,6 +25,7 @@ def default_study() -> Study:
         resolution=0.5,
         realisations=SEEDS,
         measures=("attribution", "scintillation"),
+        model="paraxial",
         title="Ultrasound of 1 to 10 MHz through 200 mm of uneven gel",
         note="Invented data: a gel block of 1500 m/s with 2 % rms sound speed and a correlation length of 5 mm. "
         + tones[0].note,

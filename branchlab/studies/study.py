@@ -12,7 +12,7 @@ import xarray as xr
 from branchlab.compare import compare, scintillation, validity_range, verdict
 from branchlab.compare.averaging import check_bands
 from branchlab.compare.smoothing import check_resolution
-from branchlab.conventions import REALISATION, WAVELENGTH, X, wave_parameter, wavenumber
+from branchlab.conventions import FULL, PARAXIAL, REALISATION, WAVELENGTH, X, wave_parameter, wavenumber
 from branchlab.errors import (
     BranchlabWarning,
     InputError,
@@ -28,12 +28,17 @@ from branchlab.rays import RayEnsemble
 from branchlab.results import labelled
 from branchlab.semiclassics import SemiclassicalSum
 from branchlab.semiclassics.trust import ENTRY_LIMIT
+from branchlab.studies.paraxial_error import model_gap, paraxial_error, same_entry, thin_results
 from branchlab.values import ValueObject, value
-from branchlab.waves import ParaxialWave
+from branchlab.waves import FullWave, ParaxialWave
 
 MEASURES = ("attribution", "scintillation")
 MAPS = 8  # maps (x, y) per wavelength and realisation that a comparison holds, copies during the join included
-STAGES = {"rays": 0.15, "wave": 0.25, "sum": 0.55, "comparison": 0.05}  # share of the time of one realisation
+MODELS = {PARAXIAL: ParaxialWave, FULL: FullWave}
+STAGES = {  # share of the time of one realisation
+    PARAXIAL: {"rays": 0.15, "wave": 0.25, "sum": 0.55, "comparison": 0.05},
+    FULL: {"rays": 0.1, "wave": 0.6, "sum": 0.2, "paraxial": 0.05, "comparison": 0.05},
+}
 RESULTS = ("reach", "crossed", "decided")  # variables of the validity range begin with these
 
 
@@ -92,6 +97,9 @@ class Study(ValueObject):
         Part of the flux that may be misplaced, between 0 and 1.
     measures : sequence of {"attribution", "scintillation"}
         What is found beside the misplaced flux: "attribution" sums over the rays and splits the mismatch.
+    model : {"full", "paraxial"}
+        Full rays with the full wave, the paraxial error told beside the mismatch; or paraxial rays with the paraxial wave,
+        faster, for small angles.
     title, note : str
         Told with the result: what this is; where the data come from, and what to beware of.
 
@@ -116,6 +124,7 @@ class Study(ValueObject):
         converter=lambda s: check_number("threshold", s, low=0.0, high=1.0, open_low=True, open_high=True),
     )
     measures: tuple[str, ...] = attrs.field(default=("attribution",), kw_only=True, converter=_measures)
+    model: str = attrs.field(default=FULL, kw_only=True, converter=lambda name: check_choice("model", name, MODELS))
     title: str = attrs.field(default="", kw_only=True, converter=str)
     note: str = attrs.field(default="", kw_only=True, converter=str)
 
@@ -168,14 +177,14 @@ class Study(ValueObject):
 
         def stage(name):
             nonlocal done
-            start, share = done, STAGES[name]
+            start, share = done, STAGES[self.model][name]
             done += share
             return None if progress is None else lambda fraction: progress(start + share * fraction)
 
-        ensemble = RayEnsemble(setup)
+        ensemble = RayEnsemble(setup, dynamics=self.model)
         rays = ensemble.density()
         _tell(stage("rays"))
-        wave = ParaxialWave(setup).solve(solved, stage("wave"))
+        wave = MODELS[self.model](setup).solve(solved, progress=stage("wave"))
         total, told = None, stage("sum")
         if "attribution" in self.measures:
             total = SemiclassicalSum(ensemble).solve(solved, told)
@@ -192,8 +201,21 @@ class Study(ValueObject):
             result[name] = rays[name]
         if "scintillation" in self.measures:
             result = result.assign(self._scintillation(rays, wave))
+        if self.model == FULL:
+            result = result.assign(self._paraxial_error(setup, rays, wave))
+            _tell(stage("paraxial"))
         _tell(stage("comparison"))
         return result
+
+    def _paraxial_error(self, setup, rays, wave) -> dict:
+        """Return how far the paraxial model is from the full one, at the centres."""
+        options = {"resolution": self.resolution, "threshold": self.threshold}
+        if same_entry(setup) is setup:
+            found = model_gap(thin_results(setup, self.centres), (rays, wave.sel(wavelength=self.centres)), **options)
+        else:
+            found = paraxial_error(setup, self.centres, **options)
+        names = {"paraxial_error": "misplaced_flux", "paraxial_error_rays": "misplaced_flux_rays"}
+        return {name: labelled(name, found[of].values, found[of].dims) for name, of in names.items()}
 
     def _scintillation(self, rays, wave) -> dict:
         """Return the scintillation index of rays, wave and averages, at the resolution."""
@@ -311,6 +333,8 @@ class Study(ValueObject):
         result.attrs["setup"] = self.setup.to_json()
         found = validity_range(result, threshold=self.threshold)
         words = verdict(result, found)
+        if "paraxial_error" in result:
+            words += "\n" + self._beside(result)
         result = result.assign({name: found[name] for name in found.data_vars if name.startswith(RESULTS)})
         result = result.assign(self.yardsticks())
         fields = self.to_dict()
@@ -324,6 +348,23 @@ class Study(ValueObject):
             "stopped": int(stopped),
         }
         return result
+
+    def _beside(self, result) -> str:
+        """Return in words how far the paraxial model is from the full one that was used."""
+        unit = "" if self.setup.length_unit == "1" else f" {self.setup.length_unit}"
+        waves = result["paraxial_error"].mean([dim for dim in result["paraxial_error"].dims if dim == REALISATION])
+        worst = ", ".join(
+            f"{100 * float(waves.sel({WAVELENGTH: one}).max()):.2g} % at wavelength {one:.3g}{unit}"
+            for one in self.centres
+        )
+        rays = result["paraxial_error_rays"]
+        said = (
+            "are refused here" if rays.isnull().all() else f"up to {100 * float(rays.max()):.2g} % in one realisation"
+        )
+        return (
+            f"Rays and wave are full ones. The paraxial wave would place up to {worst} of the flux elsewhere; the paraxial "
+            f"rays {said}."
+        )
 
     def _check_memory(self, realisations: int) -> None:
         """Refuse a study whose result does not fit, before anything is computed."""

@@ -1,6 +1,7 @@
 """Laws that hold for every medium of a kind, over many drawn at random."""
 
 import numpy as np
+import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
@@ -66,6 +67,7 @@ def test_lengths_scale_together(medium, factor):
     assert np.isclose(stretched.scale, factor * medium.scale)
 
 
+@pytest.mark.filterwarnings("ignore:.*of the same seed")
 @quick
 @given(media, media, media)
 def test_sums_are_associative_and_add_values(a, b, c):

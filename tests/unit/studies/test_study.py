@@ -247,8 +247,25 @@ def test_default_is_the_scenario_it_tells():
 def test_small_sources_are_summed_over_phase_space(source, method):
     """Frozen Gaussians rebuild the entry field of a beam of four wavelengths, or of a point, to 3 % or worse."""
     setup = bl.Setup(RandomMedium(0.05, 1.0, seed=3), source, 6.0, 12.0, screens=7)
-    result = Study(setup, [0.15], resolution=0.2).run()
+    result = Study(setup, [0.15], resolution=0.2, model="paraxial").run()
     assert result.attrs["sum_method"] == method
     assert result["trusted"].all()
     assert ("Herman-Kluk" in result.attrs["verdict"]) == (method == "herman-kluk")
     assert np.abs(result["misplaced_diffraction"]).max() < 0.02  # frozen Gaussians alone leave 5 % and more of a beam
+
+
+def test_the_full_model_tells_the_paraxial_error_beside_the_mismatch():
+    """Full rays with the full wave; the paraxial error of the wave grows along x and is above that at its entry."""
+    setup = bl.Setup(RandomMedium(0.1, 1.0, seed=1, box=(16.0, 8.0)), bl.PlaneWave(), 8.0, 8.0, screens=9, cells=128)
+    study = Study(setup, [0.3], resolution=0.15)
+    assert study.model == "full"
+    result = study.run()
+    check(result, "comparison")
+    assert result.attrs["model"] == result.attrs["wave_model"] == "full"
+    error = result["paraxial_error"].values[0]
+    assert error[-1] > 3 * error[1]
+    assert result["paraxial_error_rays"][-1] > result["paraxial_error_rays"][1]
+    assert "the paraxial rays up to" in result.attrs["verdict"]
+    thin = study.with_(model="paraxial").run()
+    assert "paraxial_error" not in thin
+    assert float(np.abs(thin["misplaced_flux"] - result["misplaced_flux"]).max()) > 1e-3

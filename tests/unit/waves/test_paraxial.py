@@ -94,9 +94,10 @@ def test_a_wavelength_too_short_for_rough_samples_is_refused(rng):
 
 
 def test_no_room_is_refused_before_it_is_taken(monkeypatch):
+    wave = ParaxialWave(setup_with())
     monkeypatch.setattr(errors, "available_memory", lambda: 10**4)
     with pytest.raises(ResourceError, match="a march of 1 wavelengths on .* GiB are free.*Use fewer wavelengths"):
-        ParaxialWave(setup_with()).solve(0.2)
+        wave.solve(0.2)
 
 
 def test_a_spectrum_that_does_not_end_is_told():
