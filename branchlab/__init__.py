@@ -25,10 +25,15 @@ _HOMES = {
     "AngularSpread": "branchlab.launch",
     "Setup": "branchlab.launch",
     "Band": "branchlab.launch",
+    "Packet": "branchlab.launch",
     # the predictors
     "RayEnsemble": "branchlab.rays",
     "SemiclassicalSum": "branchlab.semiclassics",
     "ParaxialWave": "branchlab.waves",
+    "FullWave": "branchlab.waves",
+    "PacketCloud": "branchlab.rays",
+    "WavePacket": "branchlab.waves",
+    "overlap": "branchlab.waves",
     # the verdict
     "compare": "branchlab.compare",
     "misplaced_flux": "branchlab.compare",
@@ -38,6 +43,8 @@ _HOMES = {
     "branches": "branchlab.compare",
     "validity_range": "branchlab.compare",
     "verdict": "branchlab.compare",
+    "divergence": "branchlab.compare",
+    "paraxial_error": "branchlab.studies",
     "Study": "branchlab.studies",
 }
 __all__ = list(_HOMES)

@@ -11,12 +11,12 @@ NAMES = [
     # the medium
     "RandomMedium", "SampledMedium", "Duct", "Lens", "Ramp", "BumpMedium", "settings",
     # what is sent through it
-    "PlaneWave", "PointSource", "Beam", "FieldSource", "AngularSpread", "Setup", "Band",
+    "PlaneWave", "PointSource", "Beam", "FieldSource", "AngularSpread", "Setup", "Band", "Packet",
     # the predictors
-    "RayEnsemble", "SemiclassicalSum", "ParaxialWave",
+    "RayEnsemble", "SemiclassicalSum", "ParaxialWave", "FullWave", "PacketCloud", "WavePacket", "overlap",
     # the verdict
     "compare", "misplaced_flux", "displacement", "correlation", "scintillation", "branches", "validity_range", "verdict",
-    "Study",
+    "divergence", "paraxial_error", "Study",
 ]  # fmt: skip
 
 

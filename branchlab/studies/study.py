@@ -28,7 +28,7 @@ from branchlab.rays import RayEnsemble
 from branchlab.results import labelled
 from branchlab.semiclassics import SemiclassicalSum
 from branchlab.semiclassics.trust import ENTRY_LIMIT
-from branchlab.studies.paraxial_error import model_gap, paraxial_error, same_entry, thin_results
+from branchlab.studies.model_error import model_gap, paraxial_error, same_entry, thin_results
 from branchlab.values import ValueObject, value
 from branchlab.waves import FullWave, ParaxialWave
 
