@@ -153,9 +153,8 @@ class RayEnsemble:
         px = np.concatenate([front.px, front.px[:, :1]], axis=1) if front.lap else front.px
         flux = np.where((px[:, :-1] > 0.0) & (px[:, 1:] > 0.0), front.tube_flux, 0.0)
         lost = np.where(np.isnan(px[:, :-1] + px[:, 1:]), front.tube_flux, 0.0).sum(axis=1)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            slow = 0.5 * background_index(self.setup) * (1.0 / px[:, :-1] + 1.0 / px[:, 1:])
-        cells, _, _ = self._lay(front, np.where(flux > 0.0, flux * slow, 0.0), resolution)
+        slow = np.divide(0.5 * background_index(self.setup), px, out=np.zeros_like(px), where=px > 0.0)
+        cells, _, _ = self._lay(front, flux * (slow[:, :-1] + slow[:, 1:]), resolution)
         sent, outside, unresolved = self._lay(front, flux, resolution)
         along = {
             "flux": sent.sum(axis=1),
