@@ -283,9 +283,9 @@ class FullWave:
                 off = np.abs(orders - np.round(orders)).min() * once
                 if math.sqrt(2.0 * k * off) * self.setup.length < 1.0:
                     warnings.warn(
-                        f"wavelength {length:g} fits the width of {self.setup.width:g} a whole number of times: waves along the "
-                        "periodic sides meet themselves in phase (a grazing resonance). What they carry depends on the last digit of "
-                        "the wavelength, and the iteration is slow. Use a wavelength a little off.",
+                        f"wavelength {length:g} fits the width of {self.setup.width:g} a whole number of times: waves along "
+                        "the periodic sides meet themselves in phase (a grazing resonance). What they carry depends on the last "
+                        "digit of the wavelength, and the iteration is slow. Use a wavelength a little off.",
                         BranchlabWarning,
                         stacklevel=4,
                     )

@@ -25,6 +25,7 @@ GRAZING_LOSS = 0.2  # amplitude lost per k h there, at the most
 SOFT_POLE = 1e-3  # imaginary part of p**2/k**2 that keeps h/(2 i p) finite at grazing
 SELF_SHARE = 0.85  # share of the lattice sum's own point that the sweeps leave out
 CLIP = 0.6  # v beyond this is not followed by the amplitude factor and the correction
+LARGEST_RMS = 0.2  # that the correction is fitted to
 MOST_TURNS = 12
 TURNOVER = 0.456, 0.544  # smoothstep from x- to y-sweeps in abs(qy)/(abs(qx) + abs(qy)): 40 to 50 degrees
 
@@ -164,7 +165,7 @@ class Sweeps:
 
     def __init__(self, operator, rms: float):
         grid = operator.grid
-        self.operator, self.rms = operator, max(rms, 1e-3)
+        self.operator, self.rms = operator, min(max(rms, 1e-3), LARGEST_RMS)
         self.wide = False
         self.along = _Lines(operator, operator.v, grid.loss_x, grid.loss_y, grid.pitch[0], grid.qy, 0.0, self.rms)
         real = REALS[operator.dtype]
