@@ -20,6 +20,9 @@ from branchlab.rays.march import Marcher, RayState, refuse_turned
 from branchlab.rays.table import POINTS_PER_SCALE, STEPS_PER_SCALE
 from branchlab.results import dataset, provenance
 
+# steps of the march that the error bar is found from, as a share: at half of them the slab's face is not followed by full
+# rays, and the bar was 60 times the error instead of ten
+COARSER_STEPS = {PARAXIAL: 0.5, FULL: 0.75}
 COARSE = 8.0  # resolutions of sagitta beyond which a tube is a straight thick line and its flux counts as unresolved
 
 
@@ -104,7 +107,8 @@ class RayEnsemble:
         Dataset of kind "density"
             intensity (x, y), the mean over a cell; flux, lost_flux (beyond open sides), unresolved_flux, rays_per_point
             and numerical_error (x): the misplaced flux between this density and the one of half the rays, with twice the
-            step along x and twice the pitch of the medium's spline, per cell: an upper bound for coarser resolutions.
+            step along x (full rays: 4/3 of it) and twice the pitch of the medium's spline, per cell: an upper bound for
+            coarser resolutions.
             Of full rays also turned_flux (x); flux, turned_flux and lost_flux add up to what was sent.
 
         Raises
@@ -121,7 +125,7 @@ class RayEnsemble:
                 f"resolution {wanted:g} is finer than the setup's cells, {setup.cell:g} (width {setup.width:g} over "
                 f"{setup.y.size} cells). Use resolution >= {setup.cell:g}, or a setup with more cells."
             )
-        coarser = self._marcher(max(1, self.steps_per_scale // 2), POINTS_PER_SCALE // 2)
+        coarser = self._marcher(max(1, int(COARSER_STEPS[self.dynamics] * self.steps_per_scale)), POINTS_PER_SCALE // 2)
         laid = np.zeros((setup.x.size, setup.y.size))
         rough = np.zeros_like(laid)
         curves = dict.fromkeys(("flux", "lost_flux", "unresolved_flux", "rays_per_point"), 0.0)
