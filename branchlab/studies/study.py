@@ -29,6 +29,7 @@ from branchlab.results import labelled
 from branchlab.semiclassics import SemiclassicalSum
 from branchlab.semiclassics.trust import ENTRY_LIMIT
 from branchlab.studies.model_error import model_gap, paraxial_error, same_entry, thin_results
+from branchlab.studies.progress import Progress, tell
 from branchlab.values import ValueObject, value
 from branchlab.waves import FullWave, ParaxialWave
 
@@ -183,7 +184,7 @@ class Study(ValueObject):
 
         ensemble = RayEnsemble(setup, dynamics=self.model)
         rays = ensemble.density()
-        _tell(stage("rays"))
+        tell(stage("rays"))
         wave = MODELS[self.model](setup).solve(solved, progress=stage("wave"))
         total, told = None, stage("sum")
         if "attribution" in self.measures:
@@ -203,8 +204,8 @@ class Study(ValueObject):
             result = result.assign(self._scintillation(rays, wave))
         if self.model == FULL:
             result = result.assign(self._paraxial_error(setup, rays, wave))
-            _tell(stage("paraxial"))
-        _tell(stage("comparison"))
+            tell(stage("paraxial"))
+        tell(stage("comparison"))
         return result
 
     def _paraxial_error(self, setup, rays, wave) -> dict:
@@ -284,7 +285,7 @@ class Study(ValueObject):
         self._check_memory(len(seeds))
         done: dict = {}
         failed: dict = {}
-        first, stopped, told = None, False, _Progress(progress)
+        first, stopped, told = None, False, Progress(progress)
         for number, seed in enumerate(seeds):
             try:
                 done[seed] = self.compared(seed, told.part(number / len(seeds), 1.0 / len(seeds)))
@@ -376,32 +377,6 @@ class Study(ValueObject):
             f"bands), {self.setup.x.size} screens and {self.setup.y.size} cells",
             "Use fewer realisations, screens or cells, or several studies.",
         )
-
-
-class _Progress:
-    """Hands on the fraction done, and remembers that the receiver raised to cancel."""
-
-    def __init__(self, receiver):
-        self.receiver = receiver
-        self.cancelled = False
-
-    def part(self, start: float, share: float):
-        """Return the progress of a part of the work."""
-
-        def tell(fraction):
-            try:
-                self.receiver(start + share * fraction)
-            except BaseException:
-                self.cancelled = True
-                raise
-
-        return None if self.receiver is None else tell
-
-
-def _tell(progress) -> None:
-    """Report that a stage is done."""
-    if progress is not None:
-        progress(1.0)
 
 
 def study_of(result: xr.Dataset) -> Study:
