@@ -58,4 +58,4 @@ def born_iteration(operator, b, start, scale: float, tolerance: float, report) -
         error = SAFETY * rho / (1.0 - rho) * sizes[-1] / scale
         if error <= tolerance:
             break
-    return Solved(field, change, rho, error, residual, count, error <= tolerance)
+    return Solved(field, change, rho, 0.0, error, residual, count, error <= tolerance)

@@ -31,6 +31,7 @@ GRIDS = 4  # that are tried, at the most
 NARROWEST = 3.0  # wavelengths across the window
 NUMBERS = ("reflected", "residual", "refinement_error", "field_error", "iterations", "memory")
 ON_SCREENS = ("flux", "forward_flux", "backward_flux", "numerical_error", "spectral_tail")
+MISPLACED = 0.5  # misplaced flux over relative error of the field: sum abs(Re psi* e)/sum abs(psi)**2, e like noise
 OUTER = 0.9  # the spectral tail is what lies beyond this share of the grid's largest wavenumber
 
 
@@ -201,6 +202,9 @@ class FullWave:
         change = reader.values(solved.left)
         power = np.sum(np.abs(psi[:, window]) ** 2, axis=1)
         moved = np.sum(np.abs((np.conj(psi) * change).real[:, window]), axis=1)
+        # waves that the grid folds onto others come back: they are most where they leave
+        folded = scattered.grid_error * (1.0 - 0.75 * np.clip(reader.x / setup.length, 0.0, 1.0))
+        spread = folded + MISPLACED * solved.unseen
         spectrum = np.abs(np.fft.fft(field, axis=1)) ** 2
         outer = np.abs(grid.qy) > OUTER * np.pi / grid.pitch[1]
         tail = spectrum[:, outer].sum(axis=1) / np.maximum(spectrum.sum(axis=1), 1e-300)
@@ -210,7 +214,7 @@ class FullWave:
             "forward_flux": forward[:-1],
             "backward_flux": backward[:-1],
             "reflected": backward[-1] / free.flux,
-            "numerical_error": (moved / np.maximum(power, 1e-300) + scattered.grid_error)[:-1],
+            "numerical_error": (moved / np.maximum(power, 1e-300) + spread)[:-1],
             "spectral_tail": tail[:-1],
             "psi": (psi * np.exp(1j * grid.bloch * grid.y))[:-1],
         }
