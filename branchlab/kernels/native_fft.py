@@ -37,6 +37,38 @@ def available() -> bool:
     return planned() and _library() is not None
 
 
+class _Plans:
+    """Both directions of one kind of transform, and what destroys them."""
+
+    def __init__(self, rows: int, n: int, dtype):
+        name, library = _NAMES[dtype], _library()
+        make = getattr(library, f"{name}_plan_many_dft")
+        make.restype = ctypes.c_void_p
+        whole, address = ctypes.c_int, ctypes.c_void_p
+        layout = [address, address, whole, whole]
+        make.argtypes = [whole, ctypes.POINTER(whole), whole, *layout, *layout, whole, ctypes.c_uint]
+        if serial := getattr(library, f"{name}_plan_with_nthreads", None):
+            serial(1)  # the number is FFTW's own global state; a plan made under another would start threads
+        data, size = pyfftw.empty_aligned((rows, n), dtype=dtype, n=64), (whole * 1)(n)
+        rows_of = (data.ctypes.data, None, 1, n)
+        self.forward, self.inverse = (
+            make(1, size, rows, *rows_of, *rows_of, sign, _MEASURE) for sign in (_FORWARD, _INVERSE)
+        )
+        self._destroy = getattr(library, f"{name}_destroy_plan")
+        self._destroy.argtypes = [address]
+        self.address = ctypes.cast(getattr(library, f"{name}_execute_dft"), address).value
+
+    def __del__(self):
+        for plan in (getattr(self, "forward", None), getattr(self, "inverse", None)):
+            if plan and hasattr(self, "_destroy"):
+                self._destroy(plan)
+
+
+_plans = functools.lru_cache(maxsize=256)(
+    _Plans
+)  # measuring takes a second for long rows; realisations share their sizes
+
+
 class NativePlan:
     """In-place transforms of a block of complex rows, for `transform`.
 
@@ -53,31 +85,12 @@ class NativePlan:
 
     def __init__(self, rows: int, n: int, dtype=np.complex128):
         self.shape, self.dtype = (rows, n), np.dtype(dtype)
-        name, library = _NAMES[self.dtype], _library()
-        make = getattr(library, f"{name}_plan_many_dft")
-        make.restype = ctypes.c_void_p
-        whole, address = ctypes.c_int, ctypes.c_void_p
-        layout = [address, address, whole, whole]
-        make.argtypes = [whole, ctypes.POINTER(whole), whole, *layout, *layout, whole, ctypes.c_uint]
-        if serial := getattr(library, f"{name}_plan_with_nthreads", None):
-            serial(1)  # the number is FFTW's own global state; a plan made under another would start threads
-        data, size = self.empty(), (whole * 1)(n)
-        rows_of = (data.ctypes.data, None, 1, n)
-        self.forward, self.inverse = (
-            make(1, size, rows, *rows_of, *rows_of, sign, _MEASURE) for sign in (_FORWARD, _INVERSE)
-        )
-        self._destroy = getattr(library, f"{name}_destroy_plan")
-        self._destroy.argtypes = [address]
-        self.address = ctypes.cast(getattr(library, f"{name}_execute_dft"), address).value
+        self._plans = _plans(rows, n, self.dtype)  # kept alive
+        self.address, self.forward, self.inverse = self._plans.address, self._plans.forward, self._plans.inverse
 
     def empty(self) -> np.ndarray:
         """Return a block with the alignment that the plans ask for."""
         return pyfftw.empty_aligned(self.shape, dtype=self.dtype, n=64)
-
-    def __del__(self):
-        for plan in (getattr(self, "forward", None), getattr(self, "inverse", None)):
-            if plan and hasattr(self, "_destroy"):
-                self._destroy(plan)
 
 
 @intrinsic
