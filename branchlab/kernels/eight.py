@@ -44,6 +44,23 @@ class Eight:
         function = cgutils.get_or_insert_function(self.builder.module, kind, f"llvm.floor.v{LANES}f64")
         return Eight(self.builder, self.builder.call(function, [self.value]))
 
+    def __rtruediv__(self, other):
+        return Eight(self.builder, self._with(other)) / self
+
+    def at_least(self, low):
+        """Return these or `low`, whichever is larger; `low` for nan."""
+        above = self.builder.fcmp_ordered(">=", self.value, self._with(low))
+        return Eight(self.builder, self.builder.select(above, self.value, self._with(low)))
+
+    def at_most(self, high):
+        """Return these or `high`, whichever is smaller; `high` for nan."""
+        below = self.builder.fcmp_ordered("<=", self.value, self._with(high))
+        return Eight(self.builder, self.builder.select(below, self.value, self._with(high)))
+
+    def whole(self):
+        """Return these, which must be whole numbers of a few digits, as eight words."""
+        return self.builder.fptosi(self.value, _WORDS)
+
     def below_zero(self, yes, no):
         """Return `yes` where a number is below zero, else (and for nan) `no`."""
         below = self.builder.fcmp_ordered("<", self.value, self._with(0.0))
@@ -104,13 +121,30 @@ def spline_cells(context, builder, table_type, table, base, floor: Eight, mask) 
     data = make_array(table_type)(context, builder, table).data
     number = builder.and_(builder.fptosi(floor.value, _WORDS), _spread(builder, mask, _WORDS))
     offset = builder.shl(number, ir.Constant(_WORDS, [3] * LANES))  # a cell is eight doubles
-    whole = []
-    for lane in range(LANES):
-        at = builder.add(base, builder.extract_element(offset, ir.Constant(_SHORT, lane)))
-        whole.append(
-            load(builder, builder.bitcast(builder.gep(data, [at], inbounds=True), _DOUBLES.as_pointer())).value
-        )
-    return [Eight(builder, row) for row in _transposed(builder, whole)[:6]]
+    return _fetched(builder, data, [builder.add(base, place) for place in _each(builder, offset)])
+
+
+def spline_rows(builder, data, patch, rows: int, row: int) -> list[Eight]:
+    """Return the six coefficients of one cell in each of eight patches, for all eight.
+
+    Patch number n is the cells n * rows ... of the table; `row` tells which of them. `patch` is eight words, each of which
+    must be a patch of the table.
+    """
+    offset = builder.mul(patch, ir.Constant(_WORDS, [8 * rows] * LANES))
+    offset = builder.add(offset, ir.Constant(_WORDS, [8 * row] * LANES))
+    return _fetched(builder, data, _each(builder, offset))
+
+
+def _each(builder, words) -> list:
+    """Return eight words one by one."""
+    return [builder.extract_element(words, ir.Constant(_SHORT, lane)) for lane in range(LANES)]
+
+
+def _fetched(builder, data, places) -> list[Eight]:
+    """Return the first six doubles at each of eight places, each of them for all eight."""
+    addresses = [builder.bitcast(builder.gep(data, [at], inbounds=True), _DOUBLES.as_pointer()) for at in places]
+    rows = [load(builder, address).value for address in addresses]
+    return [Eight(builder, row) for row in _transposed(builder, rows)[:6]]
 
 
 def _transposed(builder, rows):

@@ -22,7 +22,7 @@ _OPTIONS = {"nogil": True, "cache": True, "error_model": "numpy"}
 _TANGENTS = {FRONT_ROWS: ((3, 4),), MATRIX_ROWS: ((3, 4), (6, 7))}
 
 
-def _taylor(t, w, order):
+def taylor(t, w, order):
     """Return f, f', f''/2, ... of the polynomial sum w[m] t**m (Horner's scheme)."""
     rows = [w[-1]] + [None] * order
     for coefficient in reversed(w[:-1]):
@@ -44,7 +44,7 @@ class _Row:
         """Return W, W_y, W_yy/2, W_yyy/6, as far as `order`."""
         u = (y - self.start) * self.inverse
         floor = u.floor()
-        rows = _taylor(u - floor, spline_cells(*self.table, floor, self.mask), order)
+        rows = taylor(u - floor, spline_cells(*self.table, floor, self.mask), order)
         scale = self.inverse
         for d in range(1, order + 1):
             rows[d] = rows[d] * scale

@@ -7,6 +7,7 @@ from collections.abc import Iterator
 import numpy as np
 
 from branchlab.errors import RangeError
+from branchlab.kernels.eight import LANES
 from branchlab.kernels.full_rays import FATE, FIXED, GOING, LOST, MASLOV, OUT_ROWS, TANGENT, march_to_screens
 from branchlab.launch.part import FrontRays
 from branchlab.launch.slab import Slab
@@ -93,21 +94,23 @@ class FullMarcher:
         pace = table.step * math.sqrt(self.energy)
         most = LONGEST_WAY * math.ceil((self.x[-1] + self.plane.face) / pace)
         rows = OUT_ROWS + 2 * matrix
-        last = np.zeros((rows, rays.y.size))  # what rays show that never reach a screen
+        last = np.zeros((rows, state.shape[1]))  # what rays show that never reach a screen
         last[0], last[1], last[2], last[5], last[6], last[7] = state[[1, 3, 4, MASLOV, FATE, 2]]
         together = max(1, SCREENS_BYTES // max(last.nbytes, 1))
         for first in range(0, self.x.size, together):
             screens = self.x[first : first + together]
             out = np.empty((screens.size, *last.shape))
-            out[:] = last
-            march_to_screens(state, out, screens, *look, edge, table.step, table.strength, most)
+            march_to_screens(state, out, last, screens, *look, edge, table.step, table.strength, most)
             for x, row in zip(screens, out, strict=True):
-                yield _given(x, row, edge)
+                yield _given(x, row[:, : rays.y.size], edge)
             last = out[-1].copy()
 
     def _start(self, rays: FrontRays, matrix: bool) -> np.ndarray:
         """Return the rays at x = -face/2, where the medium is even and coordinates of the kernel map are true ones."""
-        state = np.zeros((FIXED + TANGENT * (1 + matrix), rays.y.size))
+        count = rays.y.size
+        whole = np.zeros((FIXED + TANGENT * (1 + matrix), -(-count // LANES) * LANES))
+        whole[2], whole[FATE, count:] = 1.0, LOST
+        state = whole[:, :count]
         square = self.energy - rays.p**2
         travels = square > 0.0
         px = np.sqrt(np.where(travels, square, 1.0))
@@ -124,7 +127,7 @@ class FullMarcher:
         here = px * state[FIXED + 1] - rays.p * state[FIXED]
         there = np.where(dy == 0.0, dp, dy)
         state[MASLOV] = np.where((here < 0.0) & (there > 0.0), -1.0, np.where((here > 0.0) & (there < 0.0), -1.0, 0.0))
-        return state
+        return whole
 
 
 def _given(x: float, row, edge: float) -> RayState:
