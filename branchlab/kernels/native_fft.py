@@ -17,7 +17,7 @@ from numba.extending import intrinsic
 from branchlab.kernels.fourier import planned, pyfftw
 
 _NAMES = {np.dtype(np.complex128): "fftw", np.dtype(np.complex64): "fftwf"}
-_FORWARD, _INVERSE, _MEASURE = -1, 1, 0
+_FORWARD, _INVERSE, _MEASURE, _ESTIMATE = -1, 1, 0, 64
 
 
 @functools.cache
@@ -40,7 +40,7 @@ def available() -> bool:
 class _Plans:
     """Both directions of one kind of transform, and what destroys them."""
 
-    def __init__(self, rows: int, n: int, dtype):
+    def __init__(self, rows: int, n: int, dtype, flag: int):
         name, library = _NAMES[dtype], _library()
         make = getattr(library, f"{name}_plan_many_dft")
         make.restype = ctypes.c_void_p
@@ -52,7 +52,7 @@ class _Plans:
         data, size = pyfftw.empty_aligned((rows, n), dtype=dtype, n=64), (whole * 1)(n)
         rows_of = (data.ctypes.data, None, 1, n)
         self.forward, self.inverse = (
-            make(1, size, rows, *rows_of, *rows_of, sign, _MEASURE) for sign in (_FORWARD, _INVERSE)
+            make(1, size, rows, *rows_of, *rows_of, sign, flag) for sign in (_FORWARD, _INVERSE)
         )
         self._destroy = getattr(library, f"{name}_destroy_plan")
         self._destroy.argtypes = [address]
@@ -76,6 +76,8 @@ class NativePlan:
     ----------
     rows, n : int
     dtype : {complex128, complex64}
+    measured : bool
+        Try many ways and take the fastest: a second or two for a new n of thousands, and a third less time later on.
 
     Attributes
     ----------
@@ -83,9 +85,9 @@ class NativePlan:
         Of the executing function and the two plans; neither direction divides by n.
     """
 
-    def __init__(self, rows: int, n: int, dtype=np.complex128):
+    def __init__(self, rows: int, n: int, dtype=np.complex128, *, measured: bool = True):
         self.shape, self.dtype = (rows, n), np.dtype(dtype)
-        self._plans = _plans(rows, n, self.dtype)  # kept alive
+        self._plans = _plans(rows, n, self.dtype, _MEASURE if measured else _ESTIMATE)  # kept alive
         self.address, self.forward, self.inverse = self._plans.address, self._plans.forward, self._plans.inverse
 
     def empty(self) -> np.ndarray:

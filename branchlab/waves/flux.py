@@ -4,7 +4,7 @@ import numpy as np
 import scipy.fft
 
 from branchlab.launch.window import smooth_step
-from branchlab.waves.team import THREADS
+from branchlab.waves.team import workers
 
 GRAZING = 1e-3  # (k_x/k)**2 below which a wave along the screen is neither forward nor backward
 
@@ -39,23 +39,27 @@ class ScreenReader:
         """Return the x-derivative of a field on the screens."""
         return (self._slopes.astype(field.dtype) @ field).astype(np.complex128)
 
-    def forward(self, values, slopes) -> np.ndarray:
-        """Return the part of a periodic field on the screens that travels forward: of every wave, (psi + psi_x/ik_x)/2."""
+    def both_ways(self, values, slopes):
+        """Split a periodic field on the screens into what travels forward and what travels backward.
+
+        Of every wave exp(iqy), abs(q) < k: (psi +- psi_x/(i k_x))/2.
+
+        Returns
+        -------
+        forward, backward : (ndarray, ndarray)
+            Field and slope of each.
+        """
         kx2 = self.grid.k**2 - self.grid.qy**2
-        travels = kx2 > GRAZING * self.grid.k**2
-        kx = np.sqrt(np.where(travels, kx2, 1.0))
-        psi, slope = (scipy.fft.fft(one, axis=1, workers=THREADS) for one in (values, slopes))
-        plus = np.where(travels, 0.5 * (psi + slope / (1j * kx)), 0.0)
-        return self._back(plus), self._back(1j * kx * plus)
-
-    def backward(self, values, slopes) -> np.ndarray:
-        """Return the part that travels backward, and its slope."""
-        field, slope = self.forward(values, -slopes)
-        return field, -slope
-
-    @staticmethod
-    def _back(spectrum) -> np.ndarray:
-        return scipy.fft.ifft(spectrum, axis=1, workers=THREADS)
+        travels = np.flatnonzero(kx2 > GRAZING * self.grid.k**2)
+        kx = np.sqrt(kx2[travels])
+        psi, slope = (scipy.fft.fft(one, axis=1, workers=workers(one))[:, travels] for one in (values, slopes))
+        slope /= 1j * kx
+        ways = np.zeros((4, *values.shape), dtype=np.complex128)
+        for way, sign in ((0, 1.0), (2, -1.0)):
+            ways[way][:, travels] = 0.5 * (psi + sign * slope)
+            ways[way + 1][:, travels] = sign * 1j * kx * ways[way][:, travels]
+        fields = scipy.fft.ifft(ways, axis=2, overwrite_x=True, workers=workers(ways))
+        return (fields[0], fields[1]), (fields[2], fields[3])
 
     def cell_means(self, a, b) -> np.ndarray:
         """Return the mean of conj(a) b over every cell of the setup, real and imaginary, shape (screen, cell).
@@ -63,7 +67,8 @@ class ScreenReader:
         The product is formed on twice the points, which hold its whole spectrum, and integrated by its Fourier series.
         """
         fine = [self._doubled(one) for one in ((a,) if a is b else (a, b))]
-        spectrum = scipy.fft.fft(np.conj(fine[0]) * fine[-1], axis=1, norm="forward", workers=THREADS)
+        product = np.conj(fine[0]) * fine[-1]
+        spectrum = scipy.fft.fft(product, axis=1, norm="forward", workers=workers(product))
         n, cells = fine[0].shape[1], self.grid.cells
         number = np.arange(-n // 2, n // 2)
         # from the middle of the first of n points to the middle of the first cell; the mean over a cell is a sinc
@@ -80,12 +85,12 @@ class ScreenReader:
         if self._fade is not None:
             field = field * self._fade
         n = field.shape[1]
-        spectrum = scipy.fft.fft(field, axis=1, norm="forward", workers=THREADS)
+        spectrum = scipy.fft.fft(field, axis=1, norm="forward", workers=workers(field))
         wide = np.zeros((field.shape[0], 2 * n), dtype=np.complex128)
         wide[:, : n // 2], wide[:, -(n // 2) + 1 :] = spectrum[:, : n // 2], spectrum[:, n // 2 + 1 :]
         number = np.fft.fftfreq(2 * n, 1.0 / (2 * n))
         wide *= np.exp(-0.5j * np.pi * number / n)  # to the middles of half the cells: half a fine pitch back
-        return scipy.fft.ifft(wide, axis=1, norm="forward", workers=THREADS)
+        return scipy.fft.ifft(wide, axis=1, norm="forward", workers=workers(wide))
 
     def flux(self, field, slope) -> np.ndarray:
         """Return the flux through the width, Im int conj(psi) psi_x dy / k, shape (screen,)."""

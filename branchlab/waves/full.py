@@ -193,11 +193,11 @@ class FullWave:
         grid, free, solved, setup = scattered.grid, scattered.free, scattered.solved, self.setup
         reader = ScreenReader(grid, np.append(setup.x, self._table.start))
         field, slope = reader.values(solved.field), reader.slopes(solved.field)
-        psi, psi_x = free.rows(reader.x) + field, free.slopes(reader.x) + slope
-        back, back_x = reader.backward(field, slope)
-        ahead, ahead_x = reader.forward(field, slope)
+        come, come_x = free.rows(reader.x), free.slopes(reader.x)
+        psi, psi_x = come + field, come_x + slope
+        (ahead, ahead_x), (back, back_x) = reader.both_ways(field, slope)
         backward = -reader.flux(back, back_x)
-        forward = reader.flux(free.rows(reader.x) + ahead, free.slopes(reader.x) + ahead_x)
+        forward = reader.flux(come + ahead, come_x + ahead_x)
         window = np.abs(grid.y) <= 0.5 * setup.width
         change = reader.values(solved.left)
         power = np.sum(np.abs(psi[:, window]) ** 2, axis=1)

@@ -3,7 +3,7 @@
 import numpy as np
 import scipy.fft
 
-from branchlab.waves.team import THREADS
+from branchlab.waves.team import workers
 
 LINES = 48  # rows and columns that are looked at
 NEAR = 1.02  # waves up to this share of k travel
@@ -33,12 +33,12 @@ def folded(u, psi, pitch: float, k: float) -> float:
     """
     n = psi.shape[1]
     number = np.fft.fftfreq(2 * n, 0.5 / n)
-    spectrum = scipy.fft.fft(psi, axis=1, norm="forward", workers=THREADS)
+    spectrum = scipy.fft.fft(psi, axis=1, norm="forward", workers=workers(psi))
     wide = np.zeros((psi.shape[0], 2 * n), dtype=np.complex128)
     wide[:, : n // 2], wide[:, -(n // 2) + 1 :] = spectrum[:, : n // 2], spectrum[:, n // 2 + 1 :]
     turn = np.exp(-0.5j * np.pi * number / n)  # the first of 2 n points lies half a fine pitch before the first of n
-    product = u * scipy.fft.ifft(wide * turn, axis=1, norm="forward", workers=THREADS)
-    waves = scipy.fft.fft(product, axis=1, workers=THREADS)
+    product = u * scipy.fft.ifft(wide * turn, axis=1, norm="forward", workers=workers(wide))
+    waves = scipy.fft.fft(product, axis=1, workers=workers(product))
     travels = np.abs(number) * 2.0 * np.pi / (n * pitch) < NEAR * k
     own = np.linalg.norm(waves[:, travels])
     beyond = np.linalg.norm(np.roll(waves, n, axis=1)[:, travels])

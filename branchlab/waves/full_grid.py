@@ -193,7 +193,7 @@ class FullGrid:
             pitch = np.pi / (resolution * largest)
         else:
             pitch = own / points_per_wavelength
-        self.shape = tuple(2 * smooth_number(math.ceil(0.5 * span / pitch)) for span in self.span)
+        self.shape = tuple(8 * smooth_number(math.ceil(0.125 * span / pitch)) for span in self.span)
         self.pitch = tuple(span / n for span, n in zip(self.span, self.shape, strict=True))
         self.x, self.y = (
             start + (np.arange(n) + 0.5) * h for start, n, h in zip(self.start, self.shape, self.pitch, strict=True)

@@ -15,6 +15,7 @@ from branchlab.kernels.sweeps import (
 )
 from branchlab.waves.team import THREADS, shares
 
+MEASURED = 1 << 21  # points of a grid whose transforms are worth seconds of planning
 REALS = {np.dtype(np.complex128): np.float64, np.dtype(np.complex64): np.float32}
 
 
@@ -48,10 +49,15 @@ class DampedOperator:
         nx, ny = v.shape
         self.rows, self.columns = shares(nx, 2), shares(ny, COLUMNS)
         if self.native:
-            self.row_plan, self.column_plan = NativePlan(1, ny, self.dtype), NativePlan(COLUMNS, nx, self.dtype)
+            self.measured = v.size > MEASURED
+            self.row_plan, self.column_plan = self.plan(1, ny), self.plan(COLUMNS, nx)
             self.row_room = [self.row_plan.empty() for _ in range(THREADS)]
             self.column_room = [self.column_plan.empty() for _ in range(THREADS)]
             self.room = np.empty(v.shape, self.dtype)
+
+    def plan(self, rows: int, n: int) -> NativePlan:
+        """Return a plan of transforms, made with as much care as the grid is worth."""
+        return NativePlan(rows, n, self.dtype, measured=self.measured)
 
     def empty(self) -> np.ndarray:
         """Return a field that is not yet set."""

@@ -1,11 +1,11 @@
 """In-medium sweeps: an approximate inverse of the damped operator, by waves that march one way."""
 
+import functools
 import math
 
 import numpy as np
 import scipy.fft
 
-from branchlab.kernels.native_fft import NativePlan
 from branchlab.kernels.sweeps import (
     add_turned,
     begin_rows,
@@ -47,7 +47,8 @@ class _Lines:
         self.weight = h / (2j * np.sqrt(p**2 + 1j * SOFT_POLE * k**2))
         turn = min(k * h, 2.9)
         self.own = SELF_SHARE * (1.0 - turn / np.tan(turn)) / (4.0 * k**2)
-        curve, bend = _rank_one(k, h, rms, np.minimum(sine, STEEPEST))
+        curve, sines, bends = _rank_one(k, h, rms)
+        bend = np.interp(sine, sines, bends.real) + 1j * np.interp(sine, sines, bends.imag)
         self.bend, self.curve = bend.astype(dtype), np.array([curve], real)
         self.gain = np.array([1.0, 0.25, 5.0 / 32.0], real)
         self.shape = np.clip(v, -CLIP, CLIP) if np.abs(v).max() > CLIP else v
@@ -61,7 +62,7 @@ class _Lines:
         self.team.run(fill)
         self.halves = shares(v.shape[0], 2)
         if self.native:
-            self.plan, self.pair_plan = NativePlan(1, n, dtype), NativePlan(2, n, dtype)
+            self.plan, self.pair_plan = operator.plan(1, n), operator.plan(2, n)
             self.pairs = [self.pair_plan.empty() for _ in range(THREADS)]
         else:
             self.pairs = [np.empty((2, n), dtype) for _ in range(THREADS)]
@@ -119,7 +120,8 @@ def _plain_sweep(out, q, shape, gain, screen, step, bend, curve, begin, end, bac
             pair[1] = bend * pair[0]
 
 
-def _rank_one(k: float, h: float, rms: float, sine):
+@functools.lru_cache(maxsize=64)
+def _rank_one(k: float, h: float, rms: float):
     """Fit exp(i k h [(b - c) + (1 - sqrt(1 - v))]) - 1 by (v + curve v**2) bend(sine), b = sqrt(1 - v - sine**2).
 
     c = sqrt(1 - sine**2): what a step at an angle picks up in a medium beyond the product of free step and screen. The
@@ -128,27 +130,19 @@ def _rank_one(k: float, h: float, rms: float, sine):
     Returns
     -------
     curve : float
-    bend : ndarray
-        At `sine`, shape (n,).
+    sine, bend : ndarrays
+        The factor in Fourier space; it is smooth, and a grid has many wavenumbers.
     """
-
-    def excess(v, s):
-        b, c = np.sqrt(1.0 - v - s**2 + 0j), np.sqrt(1.0 - s**2 + 0j)
-        turn = np.exp(1j * k * h * (b - c + 1.0 - np.sqrt(1.0 - v)))
-        return np.where(np.abs(turn) > 1.0, turn / np.abs(turn), turn) - 1.0
-
-    v = np.linspace(-3.0 * rms, 3.0 * rms, 61)
-    weight = np.exp(-0.5 * (v / (1.5 * rms)) ** 2)[:, None]
-    table = excess(v[:, None], np.linspace(0.0, STEEPEST, 120)[None]) * weight
-    first = np.linalg.svd(table, full_matrices=False)[0][:, 0]
-    powers = np.stack([v, v**2], axis=1) * weight
-    linear, square = np.linalg.lstsq(powers, first, rcond=None)[0]
+    v, sine = np.linspace(-3.0 * rms, 3.0 * rms, 61)[:, None], np.linspace(0.0, STEEPEST, 120)
+    b, c = np.sqrt(1.0 - v - sine**2 + 0j), np.sqrt(1.0 - sine**2)
+    turn = np.exp(1j * k * h * (b - c + 1.0 - np.sqrt(1.0 - v)))
+    weight = np.exp(-0.5 * (v / (1.5 * rms)) ** 2)
+    excess = (np.where(np.abs(turn) > 1.0, turn / np.abs(turn), turn) - 1.0) * weight
+    first = np.linalg.svd(excess, full_matrices=False)[0][:, 0]
+    linear, square = np.linalg.lstsq(np.hstack([v, v**2]) * weight, first, rcond=None)[0]
     curve = float((square / linear).real)
-    profile = (v + curve * v**2) * weight[:, 0]
-    # the table of angles is made once and looked up: a grid has many wavenumbers, the factor is smooth in the sine
-    sines = np.linspace(0.0, STEEPEST, 400)
-    bend = profile @ (excess(v[:, None], sines[None]) * weight) / (profile @ profile)
-    return curve, np.interp(sine, sines, bend.real) + 1j * np.interp(sine, sines, bend.imag)
+    profile = ((v + curve * v**2) * weight)[:, 0]
+    return curve, sine, profile @ excess / (profile @ profile)
 
 
 class Sweeps:

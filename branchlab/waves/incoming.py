@@ -6,7 +6,7 @@ import numpy as np
 import scipy.fft
 
 from branchlab.launch.setup import smooth_number
-from branchlab.waves.team import THREADS
+from branchlab.waves.team import workers
 
 ROWS_AT_ONCE = 64
 STEEPEST = 0.97  # sine up to which a free wave is kept from coming round the sides of its box
@@ -57,7 +57,7 @@ class SpectrumIncoming:
             some = x[at : at + ROWS_AT_ONCE]
             modes = np.zeros((some.size, box.n), dtype=np.complex128)
             modes[:, box.travelling] = factor * np.exp(1j * np.multiply.outer(some, box.px))
-            fields = scipy.fft.ifft(modes, norm="forward", overwrite_x=True, workers=THREADS)
+            fields = scipy.fft.ifft(modes, norm="forward", overwrite_x=True, workers=workers(modes))
             out[at : at + some.size] = fields[:, box.skip : box.skip + ny]
         return out
 

@@ -5,6 +5,7 @@ from concurrent.futures import ThreadPoolExecutor
 import numpy as np
 
 THREADS = 2
+ALONE = 1 << 18  # elements that one thread transforms in a few milliseconds
 
 
 class Team:
@@ -30,3 +31,8 @@ def shares(n: int, unit: int = 1) -> list[tuple[int, int]]:
     edges = unit * np.linspace(0, n // unit, THREADS + 1).astype(int)
     edges[-1] = n
     return list(zip(edges[:-1].tolist(), edges[1:].tolist(), strict=True))
+
+
+def workers(array) -> int:
+    """Return on how many threads scipy.fft should transform an array: short work waits longer for a thread than it takes."""
+    return THREADS if array.size > ALONE else 1
