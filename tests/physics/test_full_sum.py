@@ -100,7 +100,8 @@ def test_mixtures(source, method):
     found = summed(setup, 0.2, method)
     if isinstance(source.source, PlaneWave):
         np.testing.assert_allclose(found.intensity, 1.0, atol=0.01)
-    assert np.abs(found.flux_excess).max() < 0.02 if method == "herman-kluk" else True
+    bound = {"herman-kluk": 0.02, "frozen-gaussian": 0.15}[method]  # frozen Gaussians smear a point on the entry
+    assert np.abs(found.flux_excess).max() < bound
 
 
 def test_comparison_takes_full_results_and_tells_a_mixed_pair():
