@@ -35,7 +35,7 @@ class _Spline:
         self.nx, self.ny, self.wraps, self.start_x, self.start_y, self.inverse_x, self.inverse_y = numbers
 
     def _cells(self, u, v):
-        """Return the offsets of the patches, eight words, and the places in them, of places in cells."""
+        """Return the numbers of the patches, eight words, and the places in them, of places in cells."""
         round_ = v - self.ny * (v * (1.0 / self.ny)).floor()
         v = (self.wraps * -1.0).below_zero(round_, v)
         u = u.at_least(0.0).at_most(self.nx - 1.0)  # along x, and at open sides, not beyond the last sample

@@ -1,8 +1,10 @@
 """What each method of summing sends through the medium, and what it makes of the rays on a screen."""
 
+import attrs
 import numpy as np
 
 from branchlab.launch.part import CoherentPart, FrontRays
+from branchlab.launch.window import smooth_step
 from branchlab.rays.march import LEFT, NOT_FINITE, TURNED, RayState, refuse_turned
 from branchlab.semiclassics.branches import find_branches
 from branchlab.semiclassics.frozen import FrozenGaussians
@@ -151,6 +153,25 @@ class FrontScreen:
         return float(self.manifold.flux[: loose.size][loose].sum())
 
 
+def _wider(part: CoherentPart, line: Line) -> tuple[CoherentPart, Line, float]:
+    """Return an endless part that fades out softly beyond its front, a line that holds it, and its flux over the front's.
+
+    Packets diffract at an end: it must be soft, and far from the window.
+    """
+    low, high = part.front.span
+    fade = line.pitch * line.n
+    n = -(-int(np.ceil((high - low + 2.0 * fade) / line.pitch)) // 2) * 2
+
+    def shape(y):
+        return smooth_step((y - low + fade) / fade) * smooth_step((high + fade - y) / fade)
+
+    def entry(y, k):
+        return np.tile(shape(y).astype(np.complex128), (np.size(k), 1))
+
+    wide = Line(low - fade, line.pitch, n, False)
+    return attrs.evolve(part, entry=entry), wide, float(np.sum(shape(wide.points) ** 2) * line.pitch / (high - low))
+
+
 class PhaseSpaceLaunch:
     """The packets of the Herman-Kluk sum for wavenumbers that share their rays.
 
@@ -172,11 +193,13 @@ class PhaseSpaceLaunch:
         self, part: CoherentPart, k, line: Line, gamma: float, reach: float, spacing: float, index: float | None
     ):
         self.part, self.k, self.index = part, k, index
+        rays, ds = launch_rays(part, 4096)
+        self.sent = float(np.sum(rays.amplitude**2) * ds)
+        if part.endless and index is not None and not line.periodic:
+            part, line, share = _wider(part, line)
+            self.sent *= share
         self.space = PhaseSpace(part, line, k, gamma, spacing, reach, index)
         self.rays = self.space.rays
-        rays, ds = launch_rays(part, 4096)
-        inside = np.abs(rays.y) <= -line.start  # an endless front begins beyond open sides, its packets do not
-        self.sent = float(np.sum(rays.amplitude[inside] ** 2) * ds)
 
     def on(self, state: RayState) -> HermanKluk:
         """Return the sum on the screen of a ray state."""

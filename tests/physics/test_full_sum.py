@@ -45,6 +45,15 @@ def test_plane_wave(method, angle):
     assert found.attrs["model"] == FULL
 
 
+@pytest.mark.parametrize("method", METHODS)
+def test_steep_plane_wave_between_open_sides(method):
+    """It comes in from the side, beyond the box too: intensity 1 in the whole window at 60 degrees."""
+    setup = Setup(Empty(), PlaneWave(np.pi / 3), 20.0, 12.0, "absorbing", screens=3)
+    found = summed(setup, 0.1, method)
+    np.testing.assert_allclose(found.intensity, 1.0, atol=0.01)
+    assert np.abs(found.flux_excess).max() < 0.02
+
+
 def test_herman_kluk_of_a_steep_beam_errs_by_one_over_k():
     """A narrow beam at 45 degrees with its diffraction, against its plane waves."""
     setup, errors = Setup(Empty(), Beam(1.5, angle=np.pi / 4), 6.0, 40.0, "absorbing", screens=2), []
