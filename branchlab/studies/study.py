@@ -1,5 +1,6 @@
 """A study: everything that leads from a setup to a verdict, as one value object, and its run."""
 
+import functools
 import hashlib
 import json
 import traceback
@@ -35,7 +36,7 @@ from branchlab.waves import FullWave, ParaxialWave
 
 MEASURES = ("attribution", "scintillation")
 MAPS = 8  # maps (x, y) per wavelength and realisation that a comparison holds, copies during the join included
-MODELS = {PARAXIAL: ParaxialWave, FULL: FullWave}
+MODELS = {PARAXIAL: ParaxialWave, FULL: functools.partial(FullWave, precision="single")}
 STAGES = {  # share of the time of one realisation
     PARAXIAL: {"rays": 0.15, "wave": 0.25, "sum": 0.55, "comparison": 0.05},
     FULL: {"rays": 0.1, "wave": 0.6, "sum": 0.2, "paraxial": 0.05, "comparison": 0.05},
