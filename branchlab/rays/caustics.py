@@ -69,7 +69,7 @@ def caustic_points(states: Iterable[RayState]) -> CausticPoints:
     passed = before = None
     for state in states:
         if before is None:
-            passed = np.zeros(state.y.size, dtype=np.int64)
+            passed = state.maslov.astype(np.int64)  # -1 before a source on the entry, which is no caustic itself
         else:
             at = np.flatnonzero((before.A < 0.0) != (state.A < 0.0))  # 0 is positive: a zero on a screen counts once
             passed[at] += 1
@@ -86,4 +86,5 @@ def caustic_points(states: Iterable[RayState]) -> CausticPoints:
     p = slope / h if before.px is None else _hermite(p0, p1, h * dp0, h * dp1, t)[0]
     points = CausticPoints(x + t * h, y, p, ray, order)
     in_order = np.argsort(points.x, kind="stable")
+    in_order = in_order[points.order[in_order] > 0]
     return CausticPoints(*(column[in_order] for column in points))

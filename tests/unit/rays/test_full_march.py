@@ -189,6 +189,16 @@ def test_every_medium(medium):
     np.testing.assert_allclose((last.A * last.D - last.B * last.C)[ok], 1.0, atol=1e-10)
 
 
-def test_focus_of_a_source_on_the_entry_is_not_counted():
-    rays = RayEnsemble(Setup(Empty(), PointSource(half_angle=0.9), 6.0, 12.0), dynamics=FULL)
-    assert (rays.trace(64).maslov[1:] == 0).all()
+@pytest.mark.parametrize(
+    ("medium", "half_angle"), [(Empty(), 1.0), (RandomMedium(0.01, 1.0, seed=1), 0.9)], ids=["empty", "weak"]
+)
+def test_focus_of_a_source_on_the_entry_is_not_counted(medium, half_angle):
+    """A point on x = 0, where free rays meet before they start, is no caustic; to the right angle, in an empty window."""
+    rays = RayEnsemble(Setup(medium, PointSource(half_angle=half_angle), 6.0, 12.0), dynamics=FULL)
+    traced = rays.trace(64)
+    assert (traced.maslov[1:].where(traced.status[1:] == OK, 0) == 0).all()
+    found = rays.caustics(400)
+    assert found.caustic.size == 0
+    assert np.isnan(found.first_caustic).all()
+    density = rays.density()
+    np.testing.assert_allclose(density.flux + density.turned_flux + density.lost_flux, 1.0, rtol=1e-9)
