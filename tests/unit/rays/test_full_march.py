@@ -13,7 +13,7 @@ from branchlab.rays.full_march import FullMarcher
 from branchlab.rays.march import LEFT, NOT_FINITE, OK, TURNED
 from tests.canon import MEDIA, SOURCES, setup_with
 from tests.oracles.empty import Empty
-from tests.oracles.full_twins import PlainFullRay, TensorSpline
+from tests.oracles.full_ray_twins import PlainFullRay, TensorSpline
 
 
 def launch(y, p, dp=0.0):
