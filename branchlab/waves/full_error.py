@@ -7,7 +7,7 @@ from branchlab.waves.team import workers
 
 LINES = 48  # rows and columns that are looked at
 NEAR = 1.02  # waves up to this share of k travel
-GRID_ERROR = 0.15  # error over k scale folded: 0.06 to 0.15 in 40 runs, strength .02 to .15, wavelength .1 to .25
+GRID_ERROR = 0.09  # error over k scale folded: 0.06 to 0.15 in 40 runs, strength .02 to .15, wavelength .1 to .25
 
 
 def sampled_lines(grid) -> tuple[np.ndarray, np.ndarray]:
@@ -48,7 +48,7 @@ def folded(u, psi, pitch: float, k: float) -> float:
 def grid_error(table, grid, field, free_rows, free_columns) -> float:
     """Return the estimated relative error of the field that is due to the grid.
 
-    0.15 k scale f, f the folded share of both directions: a source on a travelling wave that should not be there acts
+    0.09 k scale f, f the folded share of both directions: a source on a travelling wave that should not be there acts
     over a length of the medium's scale, with strength k/2 a length.
 
     Parameters

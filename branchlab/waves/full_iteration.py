@@ -52,9 +52,9 @@ class Solved:
     converged: bool
 
     @property
-    def left(self) -> np.ndarray:
-        """An error like the one that `field` may have: the correction, scaled to its size."""
-        return self.correction * self.correction.dtype.type(SAFETY * self.contraction / (1.0 - self.contraction))
+    def left(self) -> float:
+        """Size of the error that `field` may have, over that of the correction, which it resembles."""
+        return SAFETY * self.contraction / (1.0 - self.contraction)
 
 
 def _contraction(history) -> float:
@@ -87,6 +87,7 @@ def sweep_iteration(operator, sweeps, b, scale: float, tolerance: float, report,
     if whole == 0.0:
         return Solved(b, b, 0.0, 0.0, 0.0, 0.0, 0, True)
     x, residual, history, count = None, b, [1.0], 0
+    room = None  # a field that is not needed any more: fresh memory costs as much as a sweep
     while True:
         beta = operator.norm(residual)
         basis, found = [residual * operator.dtype.type(1.0 / beta)], []
@@ -102,15 +103,17 @@ def sweep_iteration(operator, sweeps, b, scale: float, tolerance: float, report,
             stalled = since == STALL_SPAN and history[-1] > STALLED**STALL_SPAN * history[-1 - STALL_SPAN]
             last = stalled or count >= MOST_ITERATIONS
             if last or j == kept or (count and np.linalg.norm(left) * rho < WORTHWHILE * tolerance * scale):
-                correction = _combination(operator, left, found)
+                correction = operator.empty() if room is None else room
+                _combine(operator, correction, left, found)
                 size = operator.norm(correction)
                 if count == 1:  # the residual's first fall is mostly that of waves that do not travel
                     rho = min(rho, size / (beta * operator.norm(found[0])))
                 unseen = 0.0 if sweeps.wide else _along_sides(operator, left, basis) / scale
                 error = SAFETY * rho / (1.0 - rho) * size / scale + unseen
                 if last or j == kept or error <= tolerance:
-                    answer = correction.copy()
-                    for weight, one in zip(weights, found[:-1], strict=True):
+                    answer = found.pop() if len(found) > 1 else operator.empty()
+                    np.copyto(answer, correction)
+                    for weight, one in zip(weights, found, strict=False):
                         operator.add_scaled(answer, weight, one)
                     if x is not None:
                         operator.add_scaled(answer, 1.0, x)
@@ -120,13 +123,14 @@ def sweep_iteration(operator, sweeps, b, scale: float, tolerance: float, report,
                     break
                 if unseen > 0.5 * tolerance:
                     sweeps.widen()
-            w = operator.empty()
+                room = correction
+            w, room = (operator.empty() if room is None else room), None
             operator.apply(w, z)
             for i, one in enumerate(basis):
                 matrix[i, j] = operator.inner(one, w)
                 operator.add_scaled(w, -matrix[i, j], one)
             matrix[j + 1, j] = operator.norm(w)
-            w *= operator.dtype.type(1.0 / matrix[j + 1, j].real)
+            w *= operator.dtype.type(1.0 / max(matrix[j + 1, j].real, 1e-300))
             basis.append(w)
             start = np.zeros(j + 2, complex)
             start[0] = beta
@@ -142,11 +146,11 @@ def sweep_iteration(operator, sweeps, b, scale: float, tolerance: float, report,
         np.subtract(b, residual, out=residual)
 
 
-def _combination(operator, weights, fields) -> np.ndarray:
-    total = np.zeros_like(fields[0])
-    for weight, field in zip(weights, fields, strict=True):
-        operator.add_scaled(total, weight, field)
-    return total
+def _combine(operator, out, weights, fields) -> None:
+    """Set `out` to the sum of weights times fields."""
+    np.multiply(fields[0], operator.dtype.type(weights[0]), out=out)
+    for weight, field in zip(weights[1:], fields[1:], strict=True):
+        operator.add_scaled(out, weight, field)
 
 
 def _along_sides(operator, weights, basis) -> float:
