@@ -139,13 +139,13 @@ def by_an_integrator(y, p):
         dm = np.array([[h_yp, h_pp], [-h_yy, -h_yp]]) @ m
         return [p / px, -0.5 * v_y / px, (1 - v) / px, *dm.ravel()]
 
-    found = solve_ivp(slopes, (0, 14), [y, p, 0, 1, 0, 0, 1], method="DOP853", rtol=1e-12, atol=1e-13)
+    found = solve_ivp(slopes, (0, 14), [y, p, 0, 1, 0, 0, 1], method="DOP853", rtol=1e-11, atol=1e-12)
     return found.y[:, -1]
 
 
 def test_order_of_the_march_is_four():
     """Errors of y, p, action and matrix against a general integrator fall with the fourth power of the step."""
-    y, p = np.linspace(-1.2, 1.2, 7), np.linspace(0.3, -0.2, 7)
+    y, p = np.array([-1.2, 0.3, 0.8]), np.array([0.3, 0.05, -0.15])
     exact = np.array([by_an_integrator(*ray) for ray in zip(y, p, strict=True)]).T
     errors, steps = [], (6, 9, 13)
     for n in steps:
@@ -213,10 +213,35 @@ def test_luneburg_lens():
     """
     setup = Setup(Luneburg(1.0, 1.5), PlaneWave(), 2.5, 4.0, "absorbing", screens=11, cells=64)
     y = np.array([-0.8, -0.5, -0.1, 0.1, 0.5, 0.8])
-    before, last = seen(setup, [0.4, 2.5], y, 0.0, 8, 32)
-    np.testing.assert_allclose(last.y, 0.0, atol=2e-3)
+    before, last = seen(setup, [0.4, 2.5], y, 0.0, 8, 20)
+    np.testing.assert_allclose(last.y, 0.0, atol=3e-3)
     np.testing.assert_allclose(last.p, -np.sin(np.arcsin(y)), atol=5e-3)  # each comes out at its own angle
     np.testing.assert_allclose(last.action - before.action, 0.1 + 1 + np.pi / 2, atol=2e-3)
+
+
+@value
+class FishEye(Medium):
+    """n = 2/(1 + r**2) inside r < 1 about (x0, 0), 1 outside: continuous, with a bend at the rim."""
+
+    x: float = attrs.field(converter=float)
+    scale = 0.1
+
+    def rows(self, x, y, *, dx=0, dy=0):
+        square = ((check_axis("x", x) - self.x) ** 2)[:, None] + check_axis("y", y)[None, :] ** 2
+        return np.minimum(1.0 - 4.0 / (1.0 + square) ** 2, 0.0)
+
+
+def test_fish_eye():
+    """Rays from a point of the rim run on circles to the point opposite, all by a path of pi.
+
+    Maxwell (1854); Born & Wolf, sect. 4.2.2 (from memory). Bounds as for the Luneburg lens.
+    """
+    setup = Setup(FishEye(1.6), PlaneWave(), 2.6, 4.0, "absorbing", screens=11, cells=64)
+    angle = np.array([-0.7, -0.4, -0.1, 0.2, 0.6])
+    first, last = seen(setup, [0.5, 2.6], -0.6 * np.tan(angle), np.sin(angle), 8, 20)
+    np.testing.assert_allclose(last.y, 0.0, atol=3e-3)
+    np.testing.assert_allclose(last.p, -np.sin(angle), atol=5e-3)
+    np.testing.assert_allclose(last.action - first.action - 0.1 / np.cos(angle), np.pi, atol=3e-3)
 
 
 # ---- any medium
