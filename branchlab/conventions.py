@@ -4,7 +4,8 @@ x is the range (the way the wave is sent), y is transverse; arrays are ``(x, y)`
 The medium is ``v(x, y) = V/E = 1 - n**2``. The time factor is exp(-i omega t): outgoing waves are exp(+ikr).
 Paraxial wave: i du/dx = -(1/2k) d2u/dy2 + (k/2) v u, with psi = u exp(ikx).
 Packets: (i/k) dpsi/dt = -(1/2k**2) lap psi + (v/2) psi; t is a length: the free speed is 1.
-Full rays: H = p**2/2 + v/2, dr/dt = p, dp/dt = -grad v/2.
+Full rays: H = p**2/2 + v/2 = 1/2, dr/dt = p, dp/dt = -grad v/2, S = int p dr; their intensity is flux n/(p_x dy), n the
+index of the mean medium, and the flux of a wave Im int psi* psi_x dy/(kn).
 Paraxial rays: dy/dx = p, dp/dx = -v_y/2, dS/dx = p**2/2 - v/2; the phase of a ray is kS - (pi/2) maslov.
 """
 

@@ -29,9 +29,11 @@ class FullMarcher:
     Parameters
     ----------
     setup : Setup
-    steps_per_scale, points_per_scale : int
-        Of the steps in which a ray of the mean medium goes one medium scale, two thirds; and points of the spline per
-        scale, at least.
+    steps_per_scale : int
+        A ray of the mean medium takes `FACE_STEPS` times as many for the thickness of the face, which is a medium scale or
+        less, and everywhere.
+    points_per_scale : int
+        Points of the spline per scale of the medium and, along x, per half of the face, at least.
     screens : array_like, optional
         Where rays are seen, rising; each must be behind the face's beginning and at most at `length`. Default: `setup.x`.
     """

@@ -122,7 +122,7 @@ LENSES = Lens(0.3, 1.0, x=5.0, y=-0.5) + Lens(-0.3, 0.8, x=7.0, y=0.5) + Lens(0.
 
 def lens_setup(medium=LENSES):
     """Empty at both ends: the slab's face and exit do nothing."""
-    return Setup(medium, PlaneWave(), 14.0, 24.0, "absorbing", screens=15, cells=256)
+    return Setup(medium, PlaneWave(), 14.0, 14.0, "absorbing", screens=3, cells=128)
 
 
 def by_an_integrator(y, p):
