@@ -7,7 +7,6 @@ from branchlab.waves.full_iteration import SAFETY, Solved
 LEAST_MARGIN = 1.05  # of the loss over the largest abs(v - i w): the series converges above 1
 PATHS = 12.0  # how often a wave may cross the box before the series is given up
 LONGEST = 20000  # iterations
-RHO = 0.9995  # largest contraction that the error estimate believes
 
 
 def born_loss(v, grid) -> float:
@@ -40,7 +39,7 @@ def born_iteration(operator, b, start, scale: float, tolerance: float, report) -
     crossing = 0.5 * grid.k * operator.eps * max(grid.span)
     most = int(min(LONGEST, 100.0 + PATHS * crossing))
     field, change = start, operator.empty()
-    sizes = []
+    sizes, error = [], np.inf
     for count in range(1, most + 1):
         operator.apply(change, field)
         np.subtract(b, change, out=change)
@@ -54,8 +53,8 @@ def born_iteration(operator, b, start, scale: float, tolerance: float, report) -
         if len(sizes) < 4:
             continue
         # the mean over thirty iterations: single ones go up and down
-        rho = min(RHO, (sizes[-1] / sizes[-4]) ** (1.0 / 30.0)) if sizes[-4] else 0.0
-        error = SAFETY * rho / (1.0 - rho) * sizes[-1] / scale
+        rho = (sizes[-1] / sizes[-4]) ** (1.0 / 30.0) if sizes[-4] else 0.0
+        error = SAFETY * rho / (1.0 - rho) * sizes[-1] / scale if rho < 1.0 else np.inf
         if error <= tolerance:
             break
     return Solved(field, change, rho, 0.0, error, residual, count, error <= tolerance)

@@ -74,9 +74,8 @@ class ScreenReader:
         # from the middle of the first of n points to the middle of the first cell; the mean over a cell is a sinc
         factor = np.sinc(number / cells) * np.exp(1j * np.pi * number * (1.0 / cells - 1.0 / n))
         spectrum = scipy.fft.fftshift(spectrum, axes=1) * factor
-        before = (-number[0]) % cells
-        before = (cells - before) % cells
-        after = (-(before + n)) % cells
+        before = -(n // 2) % cells  # wave 0 comes first in one of the blocks of `cells` that fall onto each other
+        after = -(before + n) % cells
         folded = np.pad(spectrum, ((0, 0), (before, after))).reshape(len(spectrum), -1, cells).sum(axis=1)
         return scipy.fft.ifft(folded, axis=1, norm="forward")[:, self._inner]
 

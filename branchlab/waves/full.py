@@ -39,8 +39,8 @@ class FullWave:
     """The wave of a setup, at any angle and both ways: (lap + k**2 (1 - v)) psi = 0.
 
     The medium is that of `Slab`: it begins at a face about x = 0 and fades out behind x = length and, with absorbing
-    sides, beyond the sides; around it is its mean, without end. What comes in is the field that the source would have in the mean
-    medium alone (see `incoming`), a plane wave without end; what is scattered leaves through absorbing pads.
+    sides, beyond the sides; around it is its mean, without end. What comes in is the field that the source would have
+    in the mean medium alone (see `incoming`), a plane wave without end; what is scattered leaves through absorbing pads.
 
     Parameters
     ----------
@@ -53,9 +53,11 @@ class FullWave:
 
     Notes
     -----
-    v must be known on the scale of the wavelength: structure below the grid's pitch is left out. Regions with v > 1
-    are solved, by the slower of the two iterations. Near-resonances (a box of periodic sides a whole number of
-    wavelengths wide, deep wells) take many iterations.
+    psi = psi0 + psi_s with psi0 the incoming field, and (lap + k**2 (1 - v)) psi_s = k**2 (v - mean) psi0 is solved as
+    a damped Lippmann-Schwinger equation on a Fourier grid (`DampedOperator`), by flexible GMRES with one-way marches
+    through the medium as preconditioner (`Sweeps`); where v reaches 0.95, and where that stalls, by the convergent Born
+    series, which is slower. Regions with v > 1 are thus solved too. Structure of v below the grid's pitch is left out. A
+    periodic box a whole number of wavelengths wide, and deep wells, hold resonances that take many iterations.
     """
 
     def __init__(self, setup, precision: str = "double", *, points_per_wavelength: float | None = None):

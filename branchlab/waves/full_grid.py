@@ -72,7 +72,7 @@ class SlabTable:
 
     def bytes_on(self, grid) -> float:
         """Return the bytes that samples and their refitting take on a grid."""
-        first, u = self._sampled
+        u = self._sampled[1]
         return u.nbytes + 24.0 * (grid.steps[1] - grid.steps[0]) * max(grid.shape[1], grid.cells * self.per_cell)
 
     @property
@@ -80,14 +80,9 @@ class SlabTable:
         """Smallest u."""
         return float(self._sampled[1].min())
 
-    @property
-    def highest(self) -> float:
-        """Largest u."""
-        return float(self._sampled[1].max())
-
     @functools.cached_property
     def rms(self) -> float:
-        """Root mean square of u in the window."""
+        """Root mean square of u in the slab."""
         return float(np.sqrt(np.mean(self._sampled[1] ** 2)))
 
     def _embedded(self, grid) -> np.ndarray:

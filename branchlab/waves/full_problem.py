@@ -20,9 +20,7 @@ ROWS_AT_ONCE = 64
 FIELDS = 12  # fields that are held beside two an iteration, in units of one field; measured, marches along y included
 FEWEST_KEPT = 4
 SHARE = 0.8  # of the free memory
-SWEEPS_UP_TO = (
-    0.95  # largest v for which sweeps are tried: beyond 1 no wave goes on, and marches have nothing to follow
-)
+SWEEPS_UP_TO = 0.95  # largest v for which sweeps are tried: where v > 1 no wave goes on, and there is nothing to follow
 
 
 @attrs.frozen(slots=False, eq=False)
@@ -90,17 +88,19 @@ class FullProblem:
         turn, once = 2.0 * np.pi / self.wavelength * part.tilt, 2.0 * np.pi / setup.width
         return turn - once * round(turn / once)
 
-    def _machinery(self, part):
-        """Return grid, operator and sweeps that serve a part; those of the last part if its Bloch phase is the same."""
+    def machinery(self, part):
+        """Return grid, operator and sweeps (or None) for a part; those of the last part if its Bloch phase is the same."""
         bloch = self._bloch(part)
         if self._ready is None or self._ready[0].bloch != bloch:
+            self._ready = None  # let go of before as much is taken again
             grid = self._grid(bloch)
             loss = max(LEAST_LOSS, LOSS_PER_RMS * self.table.rms, grid.loss_x.max(), grid.loss_y.max())
             operator = DampedOperator(grid, self.u, loss, self.dtype, self.team)
-            self._ready = grid, operator, Sweeps(operator, self.table.rms)
+            sweeps = Sweeps(operator, self.table.rms) if np.max(self.u) < SWEEPS_UP_TO else None
+            self._ready = grid, operator, sweeps
         return self._ready
 
-    def _source(self, grid, free):
+    def source(self, grid, free):
         """Return k**2 u psi0, the norm of psi0 in the window, and psi0 on the sampled lines."""
         source = np.empty(grid.shape, self.dtype)
         setup = self.table.setup
@@ -128,11 +128,11 @@ class FullProblem:
         report : callable
             report(share) is called once an iteration.
         """
-        grid, operator, sweeps = self._machinery(part)
+        grid, operator, sweeps = self.machinery(part)
         free = incoming(grid, part)
-        b, scale, on_rows, on_columns = self._source(grid, free)
+        b, scale, on_rows, on_columns = self.source(grid, free)
         solved = None
-        if np.max(self.u) < SWEEPS_UP_TO:
+        if sweeps is not None:
             operator.green(b)
             solved = sweep_iteration(operator, sweeps, b, scale, tolerance, report, self.kept)
         if solved is None or not solved.converged:
@@ -144,7 +144,7 @@ class FullProblem:
     def _born(self, grid, free, scale, tolerance, report, begun) -> Solved:
         """Go on by the Born series, from where the sweeps got to if that is better than nothing."""
         operator = DampedOperator(grid, self.u, born_loss(self.u, grid), self.dtype, self.team)
-        b, *_ = self._source(grid, free)
+        b, *_ = self.source(grid, free)
         operator.green(b)
         useful = begun is not None and begun.error < 1.0
         start = begun.field if useful else np.zeros_like(b)

@@ -26,7 +26,7 @@ SOFT_POLE = 1e-3  # imaginary part of p**2/k**2 that keeps h/(2 i p) finite at g
 SELF_SHARE = 0.85  # share of the lattice sum's own point that the sweeps leave out
 CLIP = 0.6  # v beyond this is not followed by the amplitude factor and the correction
 LARGEST_RMS = 0.2  # that the correction is fitted to
-MOST_TURNS = 12
+MOST_TURNS = 12  # of waves along y round periodic sides, in one go
 TURNOVER = 0.456, 0.544  # smoothstep from x- to y-sweeps in abs(qy)/(abs(qx) + abs(qy)): 40 to 50 degrees
 
 
@@ -37,7 +37,7 @@ class _Lines:
         k, dtype = operator.grid.k, operator.dtype
         real = REALS[dtype]
         n = q.size
-        self.v, self.team, self.native = v, operator.team, operator.native
+        self.team, self.native = operator.team, operator.native
         sine = np.abs(q) / k
         p = np.sqrt(k**2 - q**2 + 0j)
         edge = np.clip((sine - GRAZING) / (1.0 - GRAZING), 0.0, 1.0)

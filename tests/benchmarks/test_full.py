@@ -14,7 +14,7 @@ import scipy.fft
 from branchlab.kernels.native_fft import available
 from branchlab.launch import Beam, PlaneWave, Setup
 from branchlab.media import RandomMedium
-from branchlab.waves import FullWave
+from branchlab.waves import FullWave, full_grid
 from branchlab.waves.born import born_loss
 from branchlab.waves.full_grid import SlabTable
 from branchlab.waves.full_operator import DampedOperator
@@ -51,7 +51,7 @@ def test_sweeps_against_transforms(wavelength):
     table = SlabTable(setup_of(20.0, 10.0, 0.02))
     with Team() as team:
         problem = FullProblem(table, wavelength, np.complex64, team, resolution=1.02)
-        grid, operator, sweeps = problem._machinery(table.setup.parts()[0])
+        grid, operator, sweeps = problem.machinery(table.setup.parts()[0])
         pair = pair_of(grid.shape)
         b, out = operator.empty(), operator.empty()
         b[...] = 1e-3
@@ -93,7 +93,9 @@ def series(operator, b, exact, wanted, apply):
 
 
 @pytest.mark.parametrize("size", [(20.0, 10.0), (40.0, 20.0)] if FULL else [(10.0, 9.0)])
-def test_against_the_born_series(size):
+def test_against_the_born_series(size, monkeypatch):
+    """Pads that absorb more gently than usual, for both: the series is slow where they are strong."""
+    monkeypatch.setattr(full_grid, "PAD_LOSS", 4.0)
     wavelength, tolerance = 0.1, 1e-3
     table = SlabTable(setup_of(*size, 0.05))
     part = table.setup.parts()[0]
@@ -108,7 +110,7 @@ def test_against_the_born_series(size):
             seconds = min(seconds, time.perf_counter() - begin)
         wanted = np.linalg.norm(found.solved.field - exact) / np.linalg.norm(exact)
         operator = DampedOperator(found.grid, problem.u, born_loss(problem.u, found.grid), np.complex64, team)
-        b, *_ = problem._source(found.grid, found.free)
+        b, *_ = problem.source(found.grid, found.free)
         operator.green(b)
         room = operator.empty()
 

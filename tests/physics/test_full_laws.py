@@ -68,7 +68,7 @@ def test_absorbing_sides():
     setup = Setup(Empty(), PlaneWave(), 6.0, 12.0, screens=2, cells=64)
     with Team() as team:
         problem = FullProblem(SlabTable(setup), 0.5, complex, team, resolution=1.6)
-        grid, *_ = problem._machinery(setup.parts()[0])
+        grid, *_ = problem.machinery(setup.parts()[0])
         operator = DampedOperator(grid, problem.u, born_loss(problem.u, grid), complex, team)
         inside = (grid.x > 1.5) & (grid.x < 6.0)
         for degrees in (0.0, 45.0, 58.0, 74.0):
@@ -95,7 +95,7 @@ def test_sweeps_and_born_series_agree(dtype, tolerance, allowed):
         problem = FullProblem(SlabTable(setup), 0.4, dtype, team, resolution=1.1)
         swept = problem.solve(part, tolerance, lambda share: None)
         operator = DampedOperator(swept.grid, problem.u, born_loss(problem.u, swept.grid), dtype, team)
-        b, scale, *_ = problem._source(swept.grid, swept.free)
+        b, scale, *_ = problem.source(swept.grid, swept.free)
         operator.green(b)
         born = born_iteration(operator, b, np.zeros_like(b), scale, tolerance, lambda share: None)
     off = np.linalg.norm(born.field - swept.solved.field) / np.linalg.norm(born.field)

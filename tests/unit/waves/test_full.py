@@ -40,7 +40,7 @@ def test_operator_and_sweeps_against_twins(transforms, dtype, allowed, sides, rn
     setup = small(sides, PlaneWave(0.2))
     with Team() as team:
         problem = FullProblem(SlabTable(setup), 0.5, dtype, team, resolution=1.0)
-        grid, op, sweeps = problem._machinery(setup.parts()[0])
+        grid, op, sweeps = problem.machinery(setup.parts()[0])
         field = (rng.normal(size=grid.shape) + 1j * rng.normal(size=grid.shape)).astype(dtype)
         out = op.empty()
         op.apply(out, field)
@@ -66,7 +66,7 @@ def test_wide_sweeps_do_the_same_through_both_doors(monkeypatch, rng):
         monkeypatch.setenv("BRANCHLAB_FFT", door)
         with Team() as team:
             problem = FullProblem(SlabTable(setup), 0.5, complex, team, resolution=1.0)
-            grid, op, sweeps = problem._machinery(setup.parts()[0])
+            grid, op, sweeps = problem.machinery(setup.parts()[0])
             noise = rng.normal(size=grid.shape) + 1j * rng.normal(size=grid.shape) if noise is None else noise
             for wide in (False, True):
                 out = op.empty()
@@ -83,7 +83,7 @@ def test_sweeps_are_nearly_the_inverse():
     setup = small()
     with Team() as team:
         problem = FullProblem(SlabTable(setup), 0.25, complex, team, resolution=1.1)
-        grid, op, sweeps = problem._machinery(setup.parts()[0])
+        grid, op, sweeps = problem.machinery(setup.parts()[0])
         psi = incoming(grid, setup.parts()[0]).rows(grid.x) * np.exp(-(((grid.x[:, None] - 2) / 2) ** 2))
         image, back = op.empty(), op.empty()
         op.apply(image, psi)
@@ -96,7 +96,7 @@ def test_screens_read_between_grid_points(rng):
     grid = SlabTable(setup)
     with Team() as team:
         problem = FullProblem(grid, 0.5, complex, team, resolution=1.0)
-        grid = problem._machinery(setup.parts()[0])[0]
+        grid = problem.machinery(setup.parts()[0])[0]
     field = np.zeros(grid.shape, complex)
     waves = rng.normal(size=5) + 1j * rng.normal(size=5)
     orders = np.array([-7, -2, 0, 3, 9])
