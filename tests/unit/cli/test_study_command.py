@@ -127,6 +127,8 @@ def test_netcdf_of_another_process(capsys):
     np.testing.assert_allclose(medium.v, 1.0 - (1500.0 / file["c"].transpose("x", "y").values) ** 2, atol=1e-14)
     study = own_study(medium, [0.4, 0.2])
     assert study_of(result).setup == study.setup
+    assert study_of(result).model == "full"
+    assert "the paraxial rays up to" in out
     again = study.run()
     np.testing.assert_allclose(result["misplaced_flux"], again["misplaced_flux"], atol=PLANS)
     assert result["misplaced_flux"].isel(x=-1).min() > 10 * result["numerical_error"].max()
@@ -147,7 +149,7 @@ def test_kinds_describe_one_medium(kind, values, reference):
         samples = file.load()
     units = {"index": "1", "v": "1", "depth": "m"}[kind]
     xr.Dataset({"q": values(samples["c"]).assign_attrs(units=units)}).to_netcdf("other.nc", engine="h5netcdf")
-    options = ["--wavelength", "0.4", "--bandwidth", "0", "--length", "4", "--quiet"]
+    options = ["--wavelength", "0.4", "--bandwidth", "0", "--length", "4", "--quiet", "--model", "paraxial"]
     assert main(["study", *OWN[:6], "--reference", "1500", *options]) == 0
     given = ["--medium", "other.nc", "--variable", "q", "--kind", kind]
     assert main(["study", *given, *(["--reference", reference] if reference else []), *options]) == 0
