@@ -217,7 +217,7 @@ def test_against_a_sparse_direct_solver(monkeypatch):
     direct = time.perf_counter() - begin
     wrong = np.linalg.norm(field - exact.solved.field.ravel()) / np.linalg.norm(exact.solved.field)
     print(
-        f"\n3 x 5, wavelength {wavelength}: sweeps {seconds:.4f} s, error {off:.1e}; SuperLU, {field.size} unknowns, "
+        f"\n3 x 5, wavelength {wavelength}: sweeps {seconds:.4f} s, estimated error {off:.1e}; SuperLU, {field.size} unknowns, "
         f"{direct:.1f} s, error {wrong:.1e}: {direct / seconds:.0f} times"
     )
     assert direct > 20.0 * seconds
