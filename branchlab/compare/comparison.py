@@ -1,6 +1,7 @@
 """The comparison of rays and wave, screen by screen, at one resolution."""
 
 import json
+import warnings
 
 import numpy as np
 import xarray as xr
@@ -11,6 +12,7 @@ from branchlab.compare.measures import correlation_rows, displacement_rows, misp
 from branchlab.compare.pairs import check_pair, check_side, rows
 from branchlab.compare.smoothing import cell_of, check_resolution, smooth_rows
 from branchlab.conventions import REALISATION, WAVELENGTH, X, Y
+from branchlab.errors import BranchlabWarning
 from branchlab.results import dataset
 
 STORED = {"caustic": "caustic_part"}  # "caustic" alone is a dimension of the layout
@@ -104,7 +106,7 @@ def compare(rays, wave, semiclassical=None, *, resolution: float, band=None) -> 
         - with a sum and a band: maps `removable`, `caustic_part`, `diffraction` that add up to `mismatch`; with a
           sum alone `interference` and `diffraction`. Each also as `share_...` (half its absolute integral) and as
           `misplaced_...` (the portion of the misplaced flux that it accounts for; these add up to it), with the
-          sum's `flux_excess` and `trusted`, and its method as attribute `sum_method`.
+          sum's `flux_excess`, `trusted` and `entry_error` (wavelength), and its method as attribute `sum_method`.
 
         Attribute `pair` is "matched", or "mixed" if rays and wave do not share one Hamiltonian: a mixed pair
         measures the paraxial approximation, and `validity_range` refuses it.
@@ -114,6 +116,11 @@ def compare(rays, wave, semiclassical=None, *, resolution: float, band=None) -> 
     InputError
         Different setups, screens or realisations (what differs is listed); a resolution below a cell; wavelengths
         that are needed and missing (listed, with the call that makes them); nan or negative intensities.
+
+    Warns
+    -----
+    BranchlabWarning
+        The sum rebuilds the entry field with a larger error than it is trusted to: the attribution is off.
     """
     for side, kind in ((rays, "density"), (wave, "wave"), (semiclassical, "semiclassical")):
         if side is not None or kind != "semiclassical":
@@ -160,11 +167,30 @@ def compare(rays, wave, semiclassical=None, *, resolution: float, band=None) -> 
         found |= {f"misplaced_{name}": (CURVE, v) for name, v in attribution.portions(maps, mismatch, flux).items()}
         found["flux_excess"] = (CURVE, sums.curve("flux_excess"))
         found["trusted"] = (CURVE, sums.curve("trusted") > 0.5)
+        if "entry_error" in semiclassical:
+            entry_error = rows(semiclassical, "entry_error", (WAVELENGTH,))
+            found["entry_error"] = ((REALISATION, WAVELENGTH), entry_error[:, sums.at])
+            _warn_of_entry(semiclassical, entry_error[:, np.concatenate(sums.nodes) if bands else sums.at])
 
     attrs = {"wave_model": wave.attrs["model"]}
     if semiclassical is not None:
         attrs["sum_method"] = semiclassical.attrs["method"]
     return _assembled(found, rays, wavelengths, resolution, bands, matched, attrs)
+
+
+def _warn_of_entry(semiclassical, entry_error) -> None:
+    """Say that a sum does not start as the wave does, if it is told to what error it is trusted."""
+    limit = semiclassical.attrs.get("entry_limit", np.inf)
+    worst = float(np.max(entry_error, initial=0.0, where=np.isfinite(entry_error)))
+    if worst > limit:
+        method = semiclassical.attrs["method"]
+        warnings.warn(
+            f"the semiclassical sum ({method}) rebuilds the entry field with an error of {worst:.2g}; it is trusted to "
+            f"{limit:g}, so what is called interference and diffraction here is partly an error of the sum. This is a source "
+            'of a few packets (a narrow beam, a point): use SemiclassicalSum(rays, "herman-kluk").',
+            BranchlabWarning,
+            stacklevel=3,
+        )
 
 
 def _measures(ray, wave, cell, sides, error, ending) -> dict:

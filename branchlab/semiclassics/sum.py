@@ -21,7 +21,7 @@ from branchlab.semiclassics.curvature import packet_curvature
 from branchlab.semiclassics.frozen import FrozenGaussians
 from branchlab.semiclassics.launches import FrontLaunch, PhaseSpaceLaunch, gone, launch_rays, manifold_on
 from branchlab.semiclassics.manifold import Line
-from branchlab.semiclassics.trust import CAUTIONS, trusted
+from branchlab.semiclassics.trust import CAUTIONS, ENTRY_LIMIT, trusted
 
 METHODS = tuple(CAUTIONS)
 FEWEST_RAYS, MOST_RAYS = 2048, 1 << 18
@@ -181,7 +181,7 @@ class SemiclassicalSum:
             coords[Y_FINE] = ((Y_FINE,), lines[0].points)
         attrs = {"method": self.method, "caution": CAUTIONS[self.method]}
         attrs["carrier"] = NO_CARRIER if self._full else CARRIER
-        attrs["packet_curvature"] = gamma
+        attrs |= {"packet_curvature": gamma, "entry_limit": ENTRY_LIMIT}
         attrs |= provenance(setup, model=self.rays.dynamics)
         return dataset("semiclassical", variables, coords, attrs)
 

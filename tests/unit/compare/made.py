@@ -41,17 +41,19 @@ def wave(of, wavelengths, intensity, *, error=0.0, model="paraxial"):
     return dataset("wave", variables, coords, provenance(of, model=model))
 
 
-def total(of, wavelengths, intensity, *, excess=0.0, trusted=True, model="paraxial"):
-    """A semiclassical sum; intensity (wavelength, x, y)."""
+def total(of, wavelengths, intensity, *, excess=0.0, trusted=True, entry=0.0, model="paraxial"):
+    """A semiclassical sum; intensity (wavelength, x, y), entry a number or (wavelength,)."""
     wavelengths = np.atleast_1d(np.asarray(wavelengths, dtype=float))
     shape = (wavelengths.size, of.x.size, of.y.size)
     variables = {
         "intensity": ((WAVELENGTH, X, Y), np.broadcast_to(intensity, shape).astype(float)),
         "flux_excess": ((WAVELENGTH, X), np.zeros(shape[:2]) + excess),
         "trusted": ((WAVELENGTH, X), np.broadcast_to(trusted, shape[:2]).copy()),
+        "entry_error": ((WAVELENGTH,), np.broadcast_to(entry, shape[:1]).copy()),
     }
     coords = {**_coords(of), WAVELENGTH: ((WAVELENGTH,), wavelengths)}
-    return dataset("semiclassical", variables, coords, provenance(of, model=model) | {"method": "frozen-gaussian"})
+    attrs = provenance(of, model=model) | {"method": "frozen-gaussian", "entry_limit": 0.03}
+    return dataset("semiclassical", variables, coords, attrs)
 
 
 def comparison(x, misplaced, *, error=0.0, band=None, of=None):

@@ -7,7 +7,7 @@ import pytest
 import xarray as xr
 
 from branchlab.compare import compare, correlation, displacement, misplaced_flux
-from branchlab.errors import InputError
+from branchlab.errors import BranchlabWarning, InputError
 from branchlab.launch import PointSource
 from branchlab.launch.band import Band
 from branchlab.results import check, load, save
@@ -167,6 +167,21 @@ def test_realisations_are_carried(rng):
         compare(joined[0], joined[1].isel(realisation=[2, 1, 0]), resolution=0.2)
     with pytest.raises(InputError, match="different realisations"):
         compare(joined[0], joined[1].isel(realisation=[0, 1]), resolution=0.2)
+
+
+@pytest.mark.parametrize("band", [None, BAND])
+def test_a_sum_that_does_not_start_as_the_wave_is_told(three, recwarn, band):
+    """At any wavelength that counts: here at the first node of the band, not at its centre."""
+    rays, wave, _ = three
+    even = np.ones((NODES.size, OF.x.size, OF.y.size))
+    entry = np.where(np.arange(NODES.size) == 0, 0.2, 0.01)
+    with pytest.warns(BranchlabWarning, match=r"entry field with an error of 0\.2; it is trusted to 0\.03") as caught:
+        result = compare(rays, wave, made.total(OF, NODES, even, entry=entry), resolution=0.2, band=band)
+    assert caught[0].filename == __file__
+    np.testing.assert_array_equal(result["entry_error"], [0.01] if band else entry)
+    for silent in (0.03, np.nan):  # a sum without packets rebuilds nothing
+        compare(rays, wave, made.total(OF, NODES, even, entry=silent), resolution=0.2, band=band)
+    assert not recwarn.list
 
 
 def test_goes_through_a_file(three, tmp_path):
