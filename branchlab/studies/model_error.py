@@ -5,7 +5,7 @@ import xarray as xr
 
 from branchlab.compare import misplaced_flux
 from branchlab.compare.validity import first_crossing
-from branchlab.conventions import FULL, PARAXIAL, WAVELENGTH, X
+from branchlab.conventions import FULL, PARAXIAL, REALISATION, WAVELENGTH, X
 from branchlab.errors import InputError, RangeError, check_number
 from branchlab.launch import FieldSource, PlaneWave, Setup
 from branchlab.launch.band import wavelength_axis
@@ -119,6 +119,28 @@ def recommendation(result: xr.Dataset) -> str:
     if result["misplaced_flux_rays"].isnull().all():
         lines.append("paraxial rays are refused here: more than a hundredth of their flux turns too far")
     return f"Limit {limit} of the flux at resolution {result.attrs['resolution']:.3g}{unit}: " + "; ".join(lines) + "."
+
+
+def beside(result: xr.Dataset) -> str:
+    """Return in words how far the paraxial model is from the full one, for a study in the full model.
+
+    Parameters
+    ----------
+    result : Dataset of kind "comparison"
+        With `paraxial_error` (realisation, wavelength, x) and `paraxial_error_rays` (realisation, x), or without realisations.
+    """
+    unit = "" if result.attrs["length_unit"] == "1" else f" {result.attrs['length_unit']}"
+    waves = result["paraxial_error"].mean([dim for dim in result["paraxial_error"].dims if dim == REALISATION])
+    worst = ", ".join(
+        f"{100 * float(waves.sel({WAVELENGTH: one}).max()):.2g} % at wavelength {one:.3g}{unit}"
+        for one in result[WAVELENGTH].values
+    )
+    rays = result["paraxial_error_rays"]
+    said = "are refused here" if rays.isnull().all() else f"up to {100 * float(rays.max()):.2g} % in one realisation"
+    return (
+        f"Rays and wave are full ones. The paraxial wave would place up to {worst} of the flux elsewhere; the paraxial "
+        f"rays {said}."
+    )
 
 
 def paraxial_error(

@@ -27,10 +27,9 @@ from branchlab.launch import Band, Setup
 from branchlab.media import SampledMedium
 from branchlab.rays import RayEnsemble
 from branchlab.results import labelled
-from branchlab.semiclassics import SemiclassicalSum
-from branchlab.semiclassics.trust import ENTRY_LIMIT
-from branchlab.studies.model_error import model_gap, paraxial_error, same_entry, thin_results
+from branchlab.studies.model_error import beside, model_gap, paraxial_error, same_entry, thin_results
 from branchlab.studies.progress import Progress, tell
+from branchlab.studies.sums import FROZEN, PHASE_SPACE, WHY, given_up, reason, summed
 from branchlab.values import ValueObject, value
 from branchlab.waves import FullWave, ParaxialWave
 
@@ -162,7 +161,7 @@ class Study(ValueObject):
         """Return the setup with one realisation of its medium; None: the medium as it is."""
         return self.setup if seed is None else self.setup.with_(medium=self.setup.medium.with_seed(seed))
 
-    def compared(self, seed: int | None = None, progress=None) -> xr.Dataset:
+    def compared(self, seed: int | None = None, progress=None, *, sum_method: str | None = None) -> xr.Dataset:
         """Return the comparison of rays, wave and sum in one realisation.
 
         The sum is of frozen Gaussians, or for a source that they cannot rebuild (a narrow beam, a point) Herman-Kluk's.
@@ -173,6 +172,8 @@ class Study(ValueObject):
             Of the medium. Default: the medium as it is.
         progress : callable, optional
             Called with the fraction done, 0 ... 1; it may raise to cancel.
+        sum_method : {"frozen-gaussian", "herman-kluk"}, optional
+            Default: as the source needs. Attribute `sum_method` tells which it is, and `frozen_entry_error` why.
         """
         setup, solved = self.realised(seed), self.solved_wavelengths()
         done = 0.0
@@ -189,9 +190,7 @@ class Study(ValueObject):
         wave = MODELS[self.model](setup).solve(solved, progress=stage("wave"))
         total, told = None, stage("sum")
         if "attribution" in self.measures:
-            total = SemiclassicalSum(ensemble).solve(solved, told)
-            if float(total["entry_error"].max()) > ENTRY_LIMIT:  # a source no larger than a few packets
-                total = SemiclassicalSum(ensemble, "herman-kluk").solve(solved, told)
+            total = summed(ensemble, solved, told, method=sum_method)
         result = compare(
             rays,
             wave if self.bands else wave.sel(wavelength=list(self.wavelengths)),
@@ -199,6 +198,8 @@ class Study(ValueObject):
             resolution=self.resolution,
             band=list(self.bands) or None,
         )
+        if total is not None and WHY in total.attrs:
+            result.attrs[WHY] = total.attrs[WHY]
         for name in ("rays_per_point", "unresolved_flux"):
             result[name] = rays[name]
         if "scintillation" in self.measures:
@@ -286,10 +287,18 @@ class Study(ValueObject):
         self._check_memory(len(seeds))
         done: dict = {}
         failed: dict = {}
-        first, stopped, told = None, False, Progress(progress)
-        for number, seed in enumerate(seeds):
+        first, stopped, told, method = None, False, Progress(progress), None
+        waiting = list(seeds)
+        for number, seed in enumerate(waiting):
+            part = told.part(min(number / len(seeds), 1.0), float(number < len(seeds)) / len(seeds))
             try:
-                done[seed] = self.compared(seed, told.part(number / len(seeds), 1.0 / len(seeds)))
+                done[seed] = self.compared(seed, part, sum_method=method)
+                if method is None and done[seed].attrs.get("sum_method") == PHASE_SPACE:
+                    # one method in all realisations: the parts of a mismatch are averaged over them
+                    method = PHASE_SPACE
+                    again = [one for one in done if done[one].attrs["sum_method"] == FROZEN]
+                    waiting += again
+                    done = {one: done[one] for one in done if one not in again}
             except KeyboardInterrupt:
                 if not done:
                     raise
@@ -302,6 +311,7 @@ class Study(ValueObject):
                 first = first or (seed, fault)
         if not done:
             raise first[1]
+        done = {seed: done[seed] for seed in seeds if seed in done}
         self._warn(done, failed, stopped, first)
         return self._joined(done, failed, stopped)
 
@@ -335,8 +345,11 @@ class Study(ValueObject):
         result.attrs["setup"] = self.setup.to_json()
         found = validity_range(result, threshold=self.threshold)
         words = verdict(result, found)
+        if np.isfinite(error := given_up(done.values())):
+            result.attrs[WHY] = error
+            words += "\n" + reason(error)
         if "paraxial_error" in result:
-            words += "\n" + self._beside(result)
+            words += "\n" + beside(result)
         result = result.assign({name: found[name] for name in found.data_vars if name.startswith(RESULTS)})
         result = result.assign(self.yardsticks())
         fields = self.to_dict()
@@ -350,23 +363,6 @@ class Study(ValueObject):
             "stopped": int(stopped),
         }
         return result
-
-    def _beside(self, result) -> str:
-        """Return in words how far the paraxial model is from the full one that was used."""
-        unit = "" if self.setup.length_unit == "1" else f" {self.setup.length_unit}"
-        waves = result["paraxial_error"].mean([dim for dim in result["paraxial_error"].dims if dim == REALISATION])
-        worst = ", ".join(
-            f"{100 * float(waves.sel({WAVELENGTH: one}).max()):.2g} % at wavelength {one:.3g}{unit}"
-            for one in self.centres
-        )
-        rays = result["paraxial_error_rays"]
-        said = (
-            "are refused here" if rays.isnull().all() else f"up to {100 * float(rays.max()):.2g} % in one realisation"
-        )
-        return (
-            f"Rays and wave are full ones. The paraxial wave would place up to {worst} of the flux elsewhere; the paraxial "
-            f"rays {said}."
-        )
 
     def _check_memory(self, realisations: int) -> None:
         """Refuse a study whose result does not fit, before anything is computed."""

@@ -184,11 +184,11 @@ import os, signal, sys, time
 from branchlab.cli import main
 from branchlab.studies import Study
 compared = Study.compared
-def interrupted(self, seed=None, progress=None):
+def interrupted(self, seed=None, progress=None, **options):
     if seed == {seed}:
         os.kill(os.getpid(), signal.SIGINT)
         time.sleep(30)
-    return compared(self, seed, progress)
+    return compared(self, seed, progress, **options)
 Study.compared = interrupted
 sys.exit(main(["study", "small.json"]))
 """
@@ -213,7 +213,7 @@ def test_ctrl_c_keeps_what_is_done(seed, kept):
 
 
 def test_a_fault_of_ours_keeps_its_traceback(monkeypatch):
-    def broken(self, seed=None, progress=None):
+    def broken(self, seed=None, progress=None, **options):
         raise ZeroDivisionError("ours")
 
     monkeypatch.setattr(Study, "compared", broken)
@@ -224,10 +224,10 @@ def test_a_fault_of_ours_keeps_its_traceback(monkeypatch):
 def test_failed_realisations_are_told(monkeypatch, capsys):
     compared = Study.compared
 
-    def sometimes(self, seed=None, progress=None):
+    def sometimes(self, seed=None, progress=None, **options):
         if seed == 2:
             raise ValueError("odd")
-        return compared(self, seed, progress)
+        return compared(self, seed, progress, **options)
 
     monkeypatch.setattr(Study, "compared", sometimes)
     assert main(["study", small_file()]) == 1

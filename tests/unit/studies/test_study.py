@@ -128,7 +128,7 @@ def test_progress_rises_to_one():
 def failing(*seeds, fault):
     """A replacement of `Study.compared` that fails for some seeds and else gives the small study's comparison."""
 
-    def compared(self, seed=None, progress=None):
+    def compared(self, seed=None, progress=None, **options):
         if seed in seeds:
             raise fault
         result = small_result().sel(realisation=seed).drop_vars("realisation")
@@ -245,13 +245,58 @@ def test_default_is_the_scenario_it_tells():
     ],
 )
 def test_small_sources_are_summed_over_phase_space(source, method):
-    """Frozen Gaussians rebuild the entry field of a beam of four wavelengths, or of a point, to 3 % or worse."""
+    """Frozen Gaussians rebuild the entry field of a beam of four wavelengths, or of a point, to 15 % at best.
+
+    On the first screen, x = 0.24 z_c, the medium has hardly acted, so a sum over rays must hold nearly all of the wave:
+    what frozen Gaussians leave there is their own error, no diffraction.
+    """
     setup = bl.Setup(RandomMedium(0.05, 1.0, seed=3), source, 6.0, 12.0, screens=7)
     result = Study(setup, [0.15], resolution=0.2, model="paraxial").run()
     assert result.attrs["sum_method"] == method
     assert result["trusted"].all()
-    assert ("Herman-Kluk" in result.attrs["verdict"]) == (method == "herman-kluk")
-    assert np.abs(result["misplaced_diffraction"]).max() < 0.02  # frozen Gaussians alone leave 5 % and more of a beam
+    assert np.abs(result["misplaced_diffraction"]).max() < 0.02
+    rays = bl.RayEnsemble(setup)
+    frozen = bl.SemiclassicalSum(rays).solve(0.15)
+    if method == "frozen-gaussian":
+        assert "Herman-Kluk" not in result.attrs["verdict"]
+        assert "frozen_entry_error" not in result.attrs
+        return
+    assert result.attrs["frozen_entry_error"] == pytest.approx(float(frozen.entry_error.max()))
+    assert "Herman-Kluk was taken because frozen Gaussians would" in result.attrs["verdict"]
+    with pytest.warns(BranchlabWarning, match="partly an error of the sum"):
+        other = bl.compare(rays.density(), bl.ParaxialWave(setup).solve(0.15), frozen, resolution=0.2)
+    assert result["share_diffraction"][0, 1] < 2e-3 < 2e-2 < other["share_diffraction"][0, 1]
+    assert result["share_diffraction"].max() < 0.5 * other["share_diffraction"].max()
+
+
+def test_the_sum_is_one_method_in_all_realisations():
+    """A beam near the limit: frozen Gaussians rebuild it to 2.7 % in the first realisation, to 3.4 % in the second."""
+    seeds = (8, 0)
+    study = Study(
+        bl.Setup(RandomMedium(0.05, 1.0, seed=3), bl.Beam(1.5), 3.0, 12.0, screens=4),
+        [0.15],
+        resolution=0.2,
+        model="paraxial",
+        realisations=seeds,
+    )
+    assert [study.compared(seed).attrs["sum_method"] for seed in seeds] == ["frozen-gaussian", "herman-kluk"]
+    told = []
+    result = study.run(told.append)
+    assert result.attrs["sum_method"] == "herman-kluk"
+    assert result["realisation"].values.tolist() == list(seeds)
+    assert result["entry_error"].max() < 1e-5
+    assert told == sorted(told)
+    assert told[-1] == 1.0
+
+
+def test_the_embedded_study_sums_frozen_gaussians():
+    """Its plane wave is a front without end: its entry field is rebuilt to round-off. One realisation, few screens."""
+    study = default_study()
+    short = study.setup.with_(length=12.0, screens=4)
+    result = study.with_(setup=short, realisations=[1], wavelengths=study.wavelengths[-1], measures="attribution").run()
+    assert result.attrs["sum_method"] == "frozen-gaussian"
+    assert result["entry_error"].max() < 1e-6
+    assert "frozen Gaussians on the launching front" in result.attrs["verdict"]
 
 
 def test_the_full_model_tells_the_paraxial_error_beside_the_mismatch():
